@@ -28,6 +28,18 @@ inline double wrap_angle(double angle_rad) {
   return wrapped <= -std::numbers::pi ? std::numbers::pi : wrapped;
 }
 
+/// Heading of a bearing (from true north, clockwise), in (-pi, pi]; site_bearing_rad is where the site's
+/// y axis points.
+inline double heading_from_bearing(double bearing_rad, double site_bearing_rad) {
+  return wrap_angle(site_bearing_rad + 0.5 * std::numbers::pi - bearing_rad);
+}
+
+/// Bearing of a heading, in [0, 2 pi); inverse of heading_from_bearing.
+inline double bearing_from_heading(double heading_rad, double site_bearing_rad) {
+  const double bearing = wrap_angle(site_bearing_rad + 0.5 * std::numbers::pi - heading_rad);
+  return bearing < 0.0 ? bearing + 2.0 * std::numbers::pi : bearing;
+}
+
 /// Rotation by |v| radians about v: exp of half the pure quaternion (Sola 2017, eq. 101).
 inline Quaternion rotation_exp(const Vector3& v_rad) {
   const double angle_rad = v_rad.norm();

@@ -5,6 +5,7 @@
 #pragma once
 
 #include <cstdint>
+#include <limits>
 
 namespace kedge {
 
@@ -20,6 +21,13 @@ constexpr double seconds(TimeNs duration_ns) { return static_cast<double>(durati
 /// Seconds to the nearest nanosecond; the caller keeps |duration_s| below 9e9.
 constexpr TimeNs from_seconds(double duration_s) {
   return static_cast<TimeNs>(duration_s * 1e9 + (duration_s < 0 ? -0.5 : 0.5));
+}
+
+/// a + b, held at the ends of the type: the times and offsets in a capture may be anything.
+constexpr TimeNs add_saturating(TimeNs a, TimeNs b) {
+  TimeNs sum = 0;
+  if (!__builtin_add_overflow(a, b, &sum)) return sum;
+  return b < 0 ? std::numeric_limits<TimeNs>::min() : std::numeric_limits<TimeNs>::max();
 }
 
 }  // namespace kedge

@@ -44,10 +44,10 @@ struct Estimate {
   double check_speed_sigma_mps = 0.0;
 
   /// Smoothed figures for the health checks; each is explained in MATHEMATICS.md.
-  double range_excess_m = 0.0;         ///< running mean of range innovations, refused ones included
-  double range_gated_share = 0.0;      ///< running share of refused ranges, 0 to 1
-  double field_error_share = 0.0;      ///< running |field strength error| over strength, 0 to 1
-  double heading_innovation_rad = 0.0; ///< running mean of magnetic minus predicted heading
+  double range_excess_m = 0.0;          ///< running mean of range innovations, refused ones included
+  double range_gated_share = 0.0;       ///< running share of refused ranges, 0 to 1
+  double field_error_share = 0.0;       ///< running |field strength error| over strength, 0 to 1
+  double heading_innovation_rad = 0.0;  ///< running mean of magnetic minus predicted heading
 };
 
 }  // namespace kedge::fusion

@@ -81,10 +81,10 @@ struct Measurement {
 /// What became of one measurement inside the estimator, with the figures that rests on.
 struct Outcome {
   enum class Code : std::uint8_t {
-    used,          ///< it changed the estimate
-    noted,         ///< kept for later or for a check, the estimate is as before
-    gated,         ///< its innovation lies beyond the gate
-    implausible,   ///< not finite, or outside what the model can take
+    used,         ///< it changed the estimate
+    noted,        ///< kept for later or for a check, the estimate is as before
+    gated,        ///< its innovation lies beyond the gate
+    implausible,  ///< not finite, or outside what the model can take
   };
   Code code = Code::noted;
   double innovation = 0.0;  ///< measured minus predicted, the measurement's unit

@@ -32,10 +32,10 @@ struct Site {
   std::vector<Anchor> anchors;
   double gravity_mps2 = gravity_mps2_default;
   double propagation_speed_mps = propagation_speed_mps_default;
-  double bearing_rad = 0.0;              ///< of the y axis from true north, clockwise
+  double bearing_rad = 0.0;                 ///< of the y axis from true north, clockwise
   double magnetic_north_heading_rad = 0.0;  ///< heading (site east, counter-clockwise) of magnetic north
   std::optional<double> field_ut;
-  std::optional<double> dip_rad;         ///< below the horizon
+  std::optional<double> dip_rad;  ///< below the horizon
   double ground_up_m = 0.0;
   std::optional<Box> extent;
 };

@@ -12,13 +12,14 @@
 #include "core/result.h"
 #include "pipeline/report.h"
 #include "pipeline/settings.h"
+#include "pipeline/track.h"
 
 namespace kedge::pipeline {
 
 class Engine {
  public:
-  /// `sink` must outlive the engine.
-  Engine(Settings settings, ReportSink& sink);
+  /// `sink` must outlive the engine. Every tag's estimator comes from `factory`.
+  Engine(Settings settings, ReportSink& sink, const EstimatorFactory& factory = fusion::make_estimator);
   ~Engine();
   Engine(const Engine&) = delete;
   Engine& operator=(const Engine&) = delete;
@@ -29,7 +30,7 @@ class Engine {
   [[nodiscard]] const Settings& settings() const;
 
   /// The whole state, for a checkpoint: an engine with the same settings that loads it goes on to the
-  /// same reports.
+  /// same reports. A load that fails says why and leaves a state that only a further load may use.
   void save(Saver& saver);
   [[nodiscard]] Status load(std::span<const std::byte> bytes);
 

@@ -17,7 +17,7 @@
 namespace kedge::pipeline {
 
 // Both enumerations have the numbers and words of proto/feed.proto.
-enum class Standing : std::uint8_t { silent, waking, ring, twofold, settled, coasting, lost };
+enum class Standing : std::uint8_t { silent, waking, ring, twofold, loose, settled, coasting, lost };
 enum class Concern : std::uint8_t {
   none,
   range_stale,
@@ -110,26 +110,26 @@ struct PulseReport {
 /// What became of one packet or measurement.
 enum class VerdictCode : std::uint8_t {
   used,
-  noted,           ///< kept for a check or for later
-  gated,           ///< innovation beyond the gate
-  implausible,     ///< a figure no sensor can mean; the text names field and unit
-  too_late,        ///< older than limits.delay_max_s allows
-  from_future,     ///< its time lies after its arrival
-  duplicate,       ///< this sequence number was seen
+  noted,        ///< kept for a check or for later
+  gated,        ///< innovation beyond the gate
+  implausible,  ///< a figure no sensor can mean; the text names field and unit
+  too_late,     ///< older than limits.delay_max_s allows
+  from_future,  ///< its time lies after its arrival
+  duplicate,    ///< this sequence number was seen
   unknown_device,
   unknown_anchor,
   beyond_range_max,
-  malformed,       ///< not a packet at all
+  malformed,  ///< not a packet at all
 };
 
 struct Verdict {
   TimeNs arrival_ns = 0;
-  std::optional<TimeNs> time_ns;     ///< of the measurement, where it has one
+  std::optional<TimeNs> time_ns;  ///< of the measurement, where it has one
   wire::DeviceId device_id = 0;
   std::optional<std::uint32_t> tag;
   VerdictCode code = VerdictCode::used;
   std::optional<fusion::Outcome> outcome;
-  std::string_view text;             ///< valid during the call only; may be empty
+  std::string_view text;  ///< valid during the call only; may be empty
 };
 
 /// Receives everything the engine has to say. Called from within Engine::accept.

@@ -25,10 +25,11 @@ struct TagSettings {
   fusion::Tag model;
   std::uint32_t device_id = 0;
   Matrix3 R_sensor_to_body = Matrix3::Identity();
-  Vector3 hard_iron_ut = Vector3::Zero();         ///< sensor axes, subtracted
-  Matrix3 soft_iron = Matrix3::Identity();        ///< applied after it
+  Vector3 hard_iron_ut = Vector3::Zero();   ///< sensor axes, subtracted
+  Matrix3 soft_iron = Matrix3::Identity();  ///< applied after it
   TimeNs range_lag_ns = 0;
   std::optional<double> battery_low_v;
+  bool magnetometer_calibrated = true;  ///< hard iron is configured, be it zero
 };
 
 struct Limits {
@@ -51,7 +52,8 @@ struct Limits {
 struct Settings {
   fusion::Site site;
   std::vector<TagSettings> tags;
-  std::vector<LinkSettings> links;  ///< links[i] is source i + 1
+  std::vector<std::uint32_t> anchor_devices;  ///< device numbers under which anchors report for tags
+  std::vector<LinkSettings> links;            ///< links[i] is source i + 1
   Limits limits;
 };
 

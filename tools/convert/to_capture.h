@@ -1,0 +1,26 @@
+// Logs as a capture, as if a station had recorded them.
+#pragma once
+
+#include <cstdint>
+#include <string>
+
+#include "convert/log_folder.h"
+#include "core/result.h"
+#include "proto/config.pb.h"
+
+namespace kedge::convert {
+
+struct ToCapture {
+  std::uint64_t packets = 0;
+  /// Packets that a station refuses at the door: they are in the capture all the same.
+  std::uint64_t refused = 0;
+  std::string first_refusal;  ///< "FILE:LINE: why"
+};
+
+/// Writes a new file. A packet arrives at the time of its row, so that message times compare with the
+/// logs' own; device time is the same in microseconds, counted from 1000 s before the first row or more.
+/// Times from 10^9 s on are taken as UTC, others begin on 2026-01-01.
+[[nodiscard]] Result<ToCapture> write_capture(const LogFolder& folder, const config::v1::Configuration& configuration,
+                                              const std::string& path);
+
+}  // namespace kedge::convert
