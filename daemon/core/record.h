@@ -19,10 +19,10 @@ using SourceId = std::uint32_t;
 inline constexpr SourceId station_source = 0;
 
 struct RawRecord {
-  TimeNs time_ns = 0;                 ///< arrival, station monotonic time
-  SourceId source = station_source;   ///< where it came from
-  std::uint64_t sequence = 0;         ///< counts the records of this source from 0
-  std::span<const std::byte> bytes;   ///< a datagram, a chunk of serial bytes, or a StationRecord
+  TimeNs time_ns = 0;                ///< arrival, station monotonic time
+  SourceId source = station_source;  ///< where it came from
+  std::uint64_t sequence = 0;        ///< counts the records of this source from 0
+  std::span<const std::byte> bytes;  ///< a datagram, a chunk of serial bytes, or a StationRecord
 };
 
 }  // namespace kedge

@@ -44,7 +44,8 @@ inline double bearing_from_heading(double heading_rad, double site_bearing_rad) 
 inline Quaternion rotation_exp(const Vector3& v_rad) {
   const double angle_rad = v_rad.norm();
   // Below 1e-4 rad the next series term is under 1e-17: the double cannot see it.
-  const double half_sinc = angle_rad < 1e-4 ? 0.5 - angle_rad * angle_rad / 48.0 : std::sin(0.5 * angle_rad) / angle_rad;
+  const double half_sinc =
+      angle_rad < 1e-4 ? 0.5 - angle_rad * angle_rad / 48.0 : std::sin(0.5 * angle_rad) / angle_rad;
   Quaternion q;
   q.w() = std::cos(0.5 * angle_rad);
   q.vec() = half_sinc * v_rad;

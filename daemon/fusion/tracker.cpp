@@ -29,7 +29,7 @@ constexpr double level_time_air_s = 30.0;
 constexpr double field_white_share = 0.8;
 /// What levelling leaves, as acceleration.
 constexpr double tilt_error_ground_mps2 = 0.08;
-constexpr double tilt_error_air_mps2 = 0.30;
+constexpr double tilt_error_air_mps2 = 1.5;
 
 /// Course against heading: slip and mounting of a vehicle, the gait of a walker.
 double slip_of(Profile profile) { return profile == Profile::walker ? radians(4.0) : radians(0.9); }

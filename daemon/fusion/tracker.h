@@ -53,7 +53,7 @@ struct TrackerState {
   AttitudeFilter attitude;
   StopDetector stops;
   MotionHistory motion;
-  double gained_mps = 0.0;  ///< forward, from the accelerometer alone
+  double gained_mps = 0.0;       ///< forward, from the accelerometer alone
   InertialMeasurement inertial;  ///< the newest
   bool has_inertial = false;
   TimeNs inertial_ns = 0;
@@ -95,11 +95,11 @@ struct TrackerState {
 
   template <class Archive>
   void fields(Archive& archive) {
-    archive(time_ns, begun, first, phase, begun_ns, attitude, stops, motion, gained_mps, inertial, has_inertial, inertial_ns,
-            at_rest, quiet_since_ns, quiet, moved, calm, rest_force_mps2, hypotheses, twins, lopsided_since_ns,
-            sideways_ns, path_s, window, window_anchor, window_try_ns, speed_fused_ns, speeds_refused, check,
-            obstructed, range_ns, range_used_ns, ranges_refused, range_excess_m, range_gated_share, ring_radius_m,
-            airborne, pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad);
+    archive(time_ns, begun, first, phase, begun_ns, attitude, stops, motion, gained_mps, inertial, has_inertial,
+            inertial_ns, at_rest, quiet_since_ns, quiet, moved, calm, rest_force_mps2, hypotheses, twins,
+            lopsided_since_ns, sideways_ns, path_s, window, window_anchor, window_try_ns, speed_fused_ns,
+            speeds_refused, check, obstructed, range_ns, range_used_ns, ranges_refused, range_excess_m,
+            range_gated_share, ring_radius_m, airborne, pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad);
   }
 };
 

@@ -170,8 +170,9 @@ void Tracker::recover() {
   state_.ranges_refused = 0;
   state_.range_used_ns = state_.time_ns;
   if (state_.twins) drop_mirror();
-  if (speed_aided() && points_where_it_goes()) {
-    // Everything but the heading is in doubt: begin again from what the ranges say.
+  if (speed_aided()) {
+    // Everything but the heading is in doubt: only the distance is known until the ranges, or an operator,
+    // say more.
     state_.phase = Phase::ring;
     state_.check.reset();
     return;

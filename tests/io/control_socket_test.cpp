@@ -11,8 +11,8 @@
 #include "io/json_line.h"
 #include "io/listener.h"
 #include "support/loop.h"
-#include "support/scratch_folder.h"
 #include "support/socket_client.h"
+#include "support/temporary_folder.h"
 
 using namespace kedge;
 using namespace std::chrono_literals;
@@ -94,7 +94,7 @@ TEST_CASE("an answer's text is JSON whatever it holds") {
 
 TEST_CASE("operators are answered one line each, in order") {
   asio::io_context context;
-  const test::ScratchFolder folder;
+  const test::TemporaryFolder folder;
   const std::string path = folder.file("control");
   std::vector<std::string> corrected;
   io::ControlSocket control(context, path, [&](const station::v1::Correction& correction) -> Status {
@@ -146,7 +146,7 @@ TEST_CASE("operators are answered one line each, in order") {
 
 TEST_CASE("a socket's file is replaced only if no one listens on it") {
   asio::io_context context;
-  const test::ScratchFolder folder;
+  const test::TemporaryFolder folder;
   const std::string path = folder.file("control");
   const auto accept_none = [](io::StreamSocket, const std::string&) {};
   auto first = std::make_unique<io::Listener>(context, accept_none);

@@ -12,8 +12,8 @@
 
 #include "io/feed_server.h"
 #include "support/loop.h"
-#include "support/scratch_folder.h"
 #include "support/socket_client.h"
+#include "support/temporary_folder.h"
 
 using namespace kedge;
 using namespace std::chrono_literals;
@@ -77,7 +77,7 @@ struct Station {
   }
 
   asio::io_context context;
-  test::ScratchFolder folder;
+  test::TemporaryFolder folder;
   pipeline::Settings settings = nursery();
   feed::Distributor distributor;
   std::vector<std::string> log;

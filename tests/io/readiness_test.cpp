@@ -12,7 +12,7 @@
 
 #include "io/readiness.h"
 #include "support/loop.h"
-#include "support/scratch_folder.h"
+#include "support/temporary_folder.h"
 
 using namespace kedge;
 using namespace std::chrono_literals;
@@ -54,7 +54,7 @@ class NotifySocket {
 
 TEST_CASE("systemd hears ready, status, the watchdog at half its time, and stopping") {
   asio::io_context context;
-  const test::ScratchFolder folder;
+  const test::TemporaryFolder folder;
   const NotifySocket systemd(folder.file("notify"));
   io::Readiness readiness(context);
   CHECK(readiness.watchdog_period() == 20ms);
@@ -78,7 +78,7 @@ TEST_CASE("systemd hears ready, status, the watchdog at half its time, and stopp
 
 TEST_CASE("a loop that hangs sends no watchdog") {
   asio::io_context context;
-  const test::ScratchFolder folder;
+  const test::TemporaryFolder folder;
   const NotifySocket systemd(folder.file("notify"));
   io::Readiness readiness(context);
   readiness.ready("");

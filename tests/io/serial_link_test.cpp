@@ -14,7 +14,7 @@
 #include "io/tty.h"
 #include "support/link_events.h"
 #include "support/loop.h"
-#include "support/scratch_folder.h"
+#include "support/temporary_folder.h"
 
 using namespace kedge;
 using namespace std::chrono_literals;
@@ -107,7 +107,7 @@ TEST_CASE("a line is raw, 8N1, at the rate asked for") {
 TEST_CASE("a pulled cable is told, and found again under the same name") {
   asio::io_context context;
   test::LinkEventLog events;
-  const test::ScratchFolder folder;
+  const test::TemporaryFolder folder;
   const std::string device = folder.file("mast");
   Cable first;
   std::filesystem::create_symlink(first.path(), device);
@@ -141,7 +141,7 @@ TEST_CASE("a pulled cable is told, and found again under the same name") {
 TEST_CASE("a path that leads to another device is followed though the old one still stands") {
   asio::io_context context;
   test::LinkEventLog events;
-  const test::ScratchFolder folder;
+  const test::TemporaryFolder folder;
   const std::string device = folder.file("mast");
   const Cable first;
   const Cable second;
@@ -159,7 +159,7 @@ TEST_CASE("a path that leads to another device is followed though the old one st
 
 TEST_CASE("a device that is missing or is none is no failure of the station") {
   asio::io_context context;
-  const test::ScratchFolder folder;
+  const test::TemporaryFolder folder;
   const std::string device = folder.file("mast");
   test::LinkEventLog events;
   io::SerialLink link(context, {.source = 2, .name = "mast", .device = device}, events);

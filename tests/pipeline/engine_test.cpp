@@ -98,8 +98,7 @@ TEST_CASE("a cart with a known start is followed and settled") {
 
 TEST_CASE("a sick filter restarts its own tag and touches no other") {
   const auto specs = carts(2, 20.0);
-  const auto run = [&](int sick_after) {
-    Reports reports;
+  const auto run = [&](Reports& reports, int sick_after) {
     int built = 0;
     Engine engine(settings_of(specs), reports, [&](const fusion::Site& site, const fusion::Tag& tag) {
       auto estimator = fusion::make_estimator(site, tag);
@@ -108,10 +107,11 @@ TEST_CASE("a sick filter restarts its own tag and touches no other") {
     simulation::Fleet fleet(specs);
     Feeder feeder(engine);
     feeder.run(fleet, start_ns + 20 * ns_per_s);
-    return reports;
   };
-  const Reports well = run(1'000'000);
-  const Reports sick = run(1000);
+  Reports well;
+  Reports sick;
+  run(well, 1'000'000);
+  run(sick, 1000);
   CHECK(well.of_tag(0).back().restarts == 0);
   CHECK(sick.of_tag(0).back().restarts == 1);
   CHECK(sick.of_tag(1).back().restarts == 0);

@@ -25,6 +25,7 @@ class TemporaryFolder {
   }
 
   [[nodiscard]] const std::filesystem::path& path() const { return path_; }
+  [[nodiscard]] std::string file(const char* name) const { return (path_ / name).string(); }
 
   /// Writes a file below the folder, its parents included.
   std::filesystem::path write(const std::filesystem::path& name, std::string_view content) const {

@@ -41,7 +41,7 @@ class BadInput(unittest.TestCase):
 
     def test_all_errors_of_a_configuration_at_once_with_their_places(self):
         path = self.write('site { name: "nursery" }\n'
-                          'anchors { name: "mast" anchor_id: 1 }\n'
+                          'anchors { name: "mast" anchor_id: 1 east_m: 0 north_m: 0 }\n'
                           'tags { name: "cart-1" device_id: 11 }\n'
                           'tags { name: "cart-1" device_id: 12 }\n'
                           'links { name: "radio" udp { port: 70000 } }\n')
@@ -74,7 +74,7 @@ class BadInput(unittest.TestCase):
             self.assertIn(str(station.udp_port), done.stderr)
 
     def test_replay_of_what_is_no_capture(self):
-        for content, part in ((b"", "empty"), (b"hello, this is no capture at all" * 10, "capture"),
+        for content, part in ((b"", "empty"), (b"hello, this is no capture at all" * 10, "a text file, not a pcapng file"),
                               (b"\xd4\xc3\xb2\xa1" + b"\x00" * 40, "pcap")):
             path = self.folder / "x.pcapng"
             path.write_bytes(content)

@@ -1,7 +1,13 @@
 """What the daemon published live and what the replay of its capture gives are the same bytes."""
 
 import json
+import os
+import pty
+import random
 import signal
+import socket
+import time
+import tty
 import unittest
 
 from station import Station, run, tool, wait_for
@@ -30,11 +36,6 @@ class LiveEqualsReplay(unittest.TestCase):
             self.assertEqual(located, {"cart-1", "cart-2", "cart-3", "cart-4"})
 
     def test_with_noise_on_every_link(self):
-        import os
-        import pty
-        import random
-        import socket
-        import tty
         seed = 5
         chance = random.Random(seed)
         with Station(tags=1) as station:
@@ -43,11 +44,11 @@ class LiveEqualsReplay(unittest.TestCase):
             os.symlink(os.ttyname(slave), station.serial)
             simulator = station.simulate("--seconds", 6, wait=False)
             wait_for(lambda: "link line: open" in station.log(), 8, "the serial link opens")
-            sender = socket.socket(socket.AF_INET, socket.SOCK_DGRAM)
-            for _ in range(300):
-                noise = chance.randbytes(chance.randrange(1, 400))
-                sender.sendto(noise, ("127.0.0.1", station.udp_port))
-                os.write(master, noise[:200])
+            with socket.socket(socket.AF_INET, socket.SOCK_DGRAM) as sender:
+                for _ in range(300):
+                    noise = chance.randbytes(chance.randrange(1, 400))
+                    sender.sendto(noise, ("127.0.0.1", station.udp_port))
+                    os.write(master, noise[:200])
             simulator.wait(timeout=30)
             self.assertEqual(station.stop(), 0)
             self.check(station, 100)
@@ -66,7 +67,6 @@ class LiveEqualsReplay(unittest.TestCase):
             self.assertGreater(int(times[1]["time_ns"]) - int(times[0]["time_ns"]), 3_500_000_000)
 
     def test_replay_keeps_the_pace_it_is_given(self):
-        import time
         with Station(tags=1) as station:
             station.simulate("--seconds", 6)
             self.assertEqual(station.stop(), 0)

@@ -54,6 +54,7 @@ class Station:
         self.stream = self.folder / "stream.jsonl"
         self.config = self.folder / "site.txtpb"
         self.process = None
+        self.simulators = []
         self.log_path = self.folder / "kedged.log"
         self.config.write_text(self.configuration(tags) + more)
 
@@ -62,7 +63,7 @@ class Station:
         text = f'''
 site {{ name: "nursery" declination_deg: 3
   places {{ name: "dock" east_m: 12 north_m: -40 }} }}
-anchors {{ name: "mast" anchor_id: 1 up_m: 3 }}
+anchors {{ name: "mast" anchor_id: 1 east_m: 0 north_m: 0 up_m: 3 }}
 links {{ name: "radio" udp {{ port: {self.udp_port} }} }}
 links {{ name: "line" serial {{ device: "{self.serial}" }} }}
 feed {{ tcp: "127.0.0.1:{self.tcp_port}" unix: "{self.unix}" }}
@@ -77,8 +78,9 @@ tags {{ name: "cart-{i + 1}" device_id: {11 + i} profile: wheeled magnetometer {
         return text
 
     def start(self, **more):
-        self.process = subprocess.Popen(
-            [str(KEDGED), str(self.config), "--stream", str(self.stream)], stderr=self.log_path.open("a"), **more)
+        with self.log_path.open("a", encoding="utf-8") as log:
+            self.process = subprocess.Popen(
+                [str(KEDGED), str(self.config), "--stream", str(self.stream)], stderr=log, **more)
         wait_for(lambda: " ready: " in self.log() or self.process.poll() is not None, 10, "the daemon is ready")
         assert self.process.poll() is None, self.log()
         return self
@@ -96,6 +98,9 @@ tags {{ name: "cart-{i + 1}" device_id: {11 + i} profile: wheeled magnetometer {
 
     def __exit__(self, *_):
         self.stop(signal.SIGKILL)
+        for simulator in self.simulators:
+            simulator.kill()
+            simulator.wait()
         shutil.rmtree(self.folder, ignore_errors=True)
 
     def log(self):
@@ -107,7 +112,8 @@ tags {{ name: "cart-{i + 1}" device_id: {11 + i} profile: wheeled magnetometer {
             done = run(*command)
             assert done.returncode == 0, done.stderr
             return done
-        return subprocess.Popen(command, stderr=subprocess.DEVNULL)
+        self.simulators.append(subprocess.Popen(command, stderr=subprocess.DEVNULL))
+        return self.simulators[-1]
 
     def capture(self):
         (path,) = (self.folder / "captures").glob("*.pcapng")
@@ -120,7 +126,8 @@ tags {{ name: "cart-{i + 1}" device_id: {11 + i} profile: wheeled magnetometer {
         return out.read_bytes()
 
     def messages(self):
-        return [json.loads(line) for line in self.stream.read_text().splitlines()]
+        """Of the canonical stream so far; its last line may still be in the writing."""
+        return [json.loads(line) for line in self.stream.read_text().splitlines(keepends=True) if line.endswith("\n")]
 
 
 class JsonClient:

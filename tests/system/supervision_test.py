@@ -39,6 +39,7 @@ class Supervision(unittest.TestCase):
             self.assertEqual(station.process.wait(timeout=10), 0)
             station.process = None
         finally:
+            supervisor.close()
             station.__exit__()
 
     def test_the_capture_is_complete_after_sigint_too(self):
@@ -52,7 +53,7 @@ class Supervision(unittest.TestCase):
         with tempfile.TemporaryDirectory() as folder:
             unit = (ROOT / "systemd" / "kedged.service").read_text()
             # Where it will be installed is known to the package alone; check against the program just built.
-            unit = re.sub(r"/usr/bin/kedged", str(BIN / "daemon" / "kedged"), unit)
+            unit = re.sub(r"(ExecStart\w*=)kedged", rf"\g<1>{BIN / 'daemon' / 'kedged'}", unit)
             path = os.path.join(folder, "kedged.service")
             with open(path, "w", encoding="utf-8") as out:
                 out.write(unit)

@@ -93,9 +93,7 @@ void measure(const Options& options) {
   fmt::print("\n{}", ratios);
 }
 
-}  // namespace
-
-int main(int argc, char** argv) {
+int run(int argc, char** argv) {
   CLI::App app("kedge-accuracy measures the methods on the simulated scenarios.");
   app.set_version_flag("--version", std::string(kedge::version()));
   Options options;
@@ -120,4 +118,17 @@ int main(int argc, char** argv) {
   }
   measure(options);
   return 0;
+}
+
+}  // namespace
+
+int main(int argc, char** argv) {
+  try {
+    return run(argc, argv);
+  } catch (const std::exception& failure) {
+    std::fputs("kedge-accuracy: ", stderr);
+    std::fputs(failure.what(), stderr);
+    std::fputs("\n", stderr);
+    return 1;
+  }
 }

@@ -12,6 +12,7 @@
 #include <fstream>
 #include <string>
 
+#include "core/build_info.h"
 #include "io/monotonic.h"
 #include "lookout/board.h"
 #include "lookout/feed_connection.h"
@@ -153,6 +154,7 @@ int main(int argc, char** argv) {
   CLI::App app(
       "kedge-lookout: the tags of a running station.\n"
       "Positions are estimates that can be wrong without warning; not for any safety function.");
+  app.set_version_flag("--version", std::string(kedge::version()));
   app.add_option("--connect", options.connect, "the station's feed: HOST:PORT in numbers, or unix:PATH")
       ->capture_default_str();
   app.add_flag("--once", options.once, "print one picture and end");

@@ -136,6 +136,7 @@ std::optional<std::size_t> CsvTable::index_of(std::string_view column) const {
 Result<std::size_t> CsvTable::require(std::string_view column) const {
   if (const auto index = index_of(column)) return *index;
   std::vector<std::string> names;
+  names.reserve(columns_.size());
   for (const std::string& name : columns_) names.push_back(shown(name));
   return Error{fmt::format("{}:1: no column '{}'; there are {}", name_, column, fmt::join(names, ", "))};
 }

@@ -8,7 +8,7 @@
 
 namespace kedge::scoring {
 
-void Track::add(double t_s, const Vector3& position_m, std::optional<Vector2> velocity_mps, bool ok) {
+void Track::add(double t_s, const Vector3& position_m, const std::optional<Vector2>& velocity_mps, bool ok) {
   KEDGE_ASSERT(rows_.empty() || t_s > rows_.back().t_s);
   rows_.push_back({t_s, position_m, velocity_mps, ok});
 }

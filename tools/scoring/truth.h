@@ -28,7 +28,7 @@ class Track {
   static constexpr double gap_max_s = 1.0;
 
   /// Takes rows in order of time.
-  void add(double t_s, const Vector3& position_m, std::optional<Vector2> velocity_mps, bool ok);
+  void add(double t_s, const Vector3& position_m, const std::optional<Vector2>& velocity_mps, bool ok);
   [[nodiscard]] std::size_t size() const { return rows_.size(); }
   [[nodiscard]] double begin_s() const { return rows_.front().t_s; }
   [[nodiscard]] double end_s() const { return rows_.back().t_s; }

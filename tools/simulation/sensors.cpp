@@ -52,9 +52,8 @@ Sensors::Sensors(const ScenarioSpec& spec)
   KEDGE_ASSERT(spec.inertial_rate_hz > 0.0 && spec.range_rate_hz >= 0.0);
   KEDGE_ASSERT(spec.samples_per_packet >= 1 && !spec.site.anchors.empty());
   // The channel starts in its stationary state.
-  for (std::size_t i = 0; i < obstructed_.size(); ++i) {
-    obstructed_[i] = obstruction_random_.chance(spec.faults.obstructed_share);
-  }
+  std::generate(obstructed_.begin(), obstructed_.end(),
+                [this] { return obstruction_random_.chance(spec_.faults.obstructed_share); });
 }
 
 std::optional<Reading> Sensors::next() {

@@ -16,6 +16,7 @@
 #include <vector>
 
 #include "config/load.h"
+#include "core/build_info.h"
 #include "core/result.h"
 #include "io/control_socket.h"
 
@@ -136,6 +137,7 @@ int fail(int code, const std::string& why) {
 int main(int argc, char** argv) {
   Options options;
   CLI::App app("kedge-tell: tell the running daemon where a tag stands or where it points.");
+  app.set_version_flag("--version", std::string(kedge::version()));
   app.add_option("tag", options.tag, "name of the tag")->required();
   app.add_option("--control", options.control, "the daemon's control socket; by default the configuration's");
   app.add_option("--config", options.config, "the station's configuration: control socket and places");
