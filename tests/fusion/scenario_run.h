@@ -72,19 +72,23 @@ inline Score run_scenario(const simulation::ScenarioSpec& spec, const Tag& tag) 
   return score;
 }
 
-/// `runs` varied placements of a scenario, seeds from `first_seed` on.
+/// `runs` varied placements of a scenario, seeds from `first_seed` on; 0 s: of the scenario's own length.
 inline std::vector<Score> run_scenarios(simulation::Scenario scenario, int runs, std::uint64_t first_seed,
-                                        bool known_start, Method method = Method::speed_aided) {
+                                        bool known_start, Method method = Method::speed_aided,
+                                        double duration_s = 0.0) {
   std::vector<Score> scores;
   for (int run = 0; run < runs; ++run) {
     const std::uint64_t seed = first_seed + static_cast<std::uint64_t>(run);
     simulation::ScenarioSpec spec = simulation::spec_of(scenario, seed);
     spec.placement = simulation::varied_placement(scenario, seed);
+    if (duration_s > 0.0) spec.duration_s = duration_s;
     Tag tag = simulation::tag_of(spec, known_start);
     tag.method = method;
     scores.push_back(run_scenario(spec, tag));
   }
   return sorted_by_rms(scores);
 }
+
+inline double median_rms(const std::vector<Score>& sorted) { return sorted[sorted.size() / 2].rms_m; }
 
 }  // namespace kedge::fusion
