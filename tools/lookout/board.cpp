@@ -208,7 +208,8 @@ std::string Board::screen(Extent extent, bool colour, TimeNs now_ns) const {
     std::string_view colour;
   };
   std::vector<Row> rows = {{head(now_ns), ""}, {"", ""}, {column_heads(), ""}};
-  const std::vector<Row> foot = {{"", ""}, {anchors_row(), ""}, {greeting_.caution(), ""}};
+  std::vector<Row> foot = {{"", ""}, {anchors_row(), ""}};
+  for (const std::string& line : wrapped(greeting_.caution(), extent.columns)) foot.push_back({line, ""});
   std::vector<Row> body;
   for (const auto& [name, tag] : tags_) {
     const std::string_view tint = look(standing_of(tag.position, tag.health)).colour;

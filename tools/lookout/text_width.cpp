@@ -1,6 +1,7 @@
 #include "lookout/text_width.h"
 
 #include <algorithm>
+#include <utility>
 
 namespace kedge::lookout {
 
@@ -39,6 +40,20 @@ std::string padded(std::string_view text, std::size_t columns) {
   const auto used = static_cast<std::size_t>(std::count_if(fitted.begin(), fitted.end(), begins_character));
   fitted.append(columns - used, ' ');
   return fitted;
+}
+
+std::vector<std::string> wrapped(std::string_view text, std::size_t columns) {
+  std::vector<std::string> lines;
+  std::string line;
+  while (!text.empty()) {
+    const std::size_t end = std::min(text.find(' '), text.size());
+    const std::string word = clipped(text.substr(0, end), columns);
+    if (!line.empty() && line.size() + 1 + word.size() > columns) lines.push_back(std::exchange(line, {}));
+    line += (line.empty() ? "" : " ") + word;
+    text.remove_prefix(std::min(end + 1, text.size()));
+  }
+  if (!line.empty()) lines.push_back(line);
+  return lines;
 }
 
 }  // namespace kedge::lookout

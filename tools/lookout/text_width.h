@@ -5,6 +5,7 @@
 #include <cstddef>
 #include <string>
 #include <string_view>
+#include <vector>
 
 namespace kedge::lookout {
 
@@ -16,5 +17,8 @@ namespace kedge::lookout {
 
 /// The same, filled with spaces.
 [[nodiscard]] std::string padded(std::string_view text, std::size_t columns);
+
+/// Printable, broken at spaces into lines of at most `columns`; a longer word is cut.
+[[nodiscard]] std::vector<std::string> wrapped(std::string_view text, std::size_t columns);
 
 }  // namespace kedge::lookout
