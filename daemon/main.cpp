@@ -6,6 +6,8 @@
 #include <spdlog/spdlog.h>
 #include <CLI/CLI.hpp>
 
+#include <filesystem>
+
 #include "app/live_runtime.h"
 #include "config/load.h"
 #include "config/print.h"
@@ -66,6 +68,11 @@ int main(int argc, char** argv) {
     return 0;
   }
 
+  std::error_code absent;
+  if (!stream_path.empty() && std::filesystem::equivalent(path, stream_path, absent)) {
+    fmt::print(stderr, "--stream {} is the configuration itself; name another file\n", stream_path);
+    return exit_usage;
+  }
   spdlog::set_default_logger(spdlog::stderr_color_st("kedged"));
   spdlog::set_pattern("%Y-%m-%dT%H:%M:%S.%eZ %^%l%$ %v", spdlog::pattern_time_type::utc);
   spdlog::set_level(spdlog::level::from_str(level));

@@ -39,6 +39,7 @@ function(kedge_tests name)
   target_link_libraries(test_${name} PRIVATE kedge_test_main ${ARG_LIBRARIES})
   target_compile_options(test_${name} PRIVATE ${KEDGE_WARNINGS} -Wno-conversion)
   target_precompile_headers(test_${name} REUSE_FROM kedge_test_main)
-  add_test(NAME ${name} COMMAND test_${name})
+  # Statistics over many runs show nothing more under sanitizers.
+  add_test(NAME ${name} COMMAND test_${name} $<$<BOOL:${KEDGE_SANITIZE}>:~[statistics]>)
   set_tests_properties(${name} PROPERTIES LABELS ${ARG_LABEL} TIMEOUT 600)
 endfunction()

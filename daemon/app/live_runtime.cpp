@@ -86,7 +86,10 @@ Status LiveRuntime::open() {
 
 Status LiveRuntime::open_capture() {
   const std::filesystem::path folder = configuration_.capture().folder();
-  if (folder.empty()) return {};
+  if (folder.empty()) {
+    spdlog::warn("nothing is captured: the configuration names no capture.folder");
+    return {};
+  }
   std::error_code failure;
   std::filesystem::create_directories(folder, failure);
   if (failure) return Error{fmt::format("capture folder {}: {}", folder.string(), failure.message())};
@@ -143,10 +146,10 @@ Status LiveRuntime::run() {
   readiness_.ready(status);
   spdlog::info("ready: {}", status);
   context_.run();
-  if (Status closed = stream_path_.empty() ? Status{} : stream_file_.close(); !closed) return closed;
-  if (!capture_) return {};
-  note_capture(capture_->flush());
-  return capture_file_.close();
+  const Status captured = capture_ ? capture_file_.close() : Status{};
+  const Status streamed = stream_path_.empty() ? Status{} : stream_file_.close();
+  if (!captured && !streamed) return Error{captured.error() + "; " + streamed.error()};
+  return captured ? streamed : captured;
 }
 
 void LiveRuntime::stop(int signal) {
@@ -179,12 +182,18 @@ void LiveRuntime::state_changed(SourceId source, bool open, std::string_view rea
 }
 
 void LiveRuntime::shed(SourceId source, std::uint64_t records, std::uint64_t bytes, std::string_view reason) {
-  spdlog::warn("link {}: {} records lost: {}", conduit_.settings().links[source - 1].name, records, reason);
+  const TimeNs now_ns = io::now_monotonic();
+  shed_unlogged_ += records;
+  if (now_ns - shed_logged_ns_ > 10 * ns_per_s) {
+    spdlog::warn("link {}: {} records lost: {}", conduit_.settings().links[source - 1].name, shed_unlogged_, reason);
+    shed_logged_ns_ = now_ns;
+    shed_unlogged_ = 0;
+  }
   station::v1::StationRecord record;
   record.mutable_shed()->set_source(source);
   record.mutable_shed()->set_records(records);
   record.mutable_shed()->set_bytes(bytes);
-  accept_station(record, io::now_monotonic());
+  accept_station(record, now_ns);
 }
 
 void LiveRuntime::message(const feed::v1::Message& message) {
@@ -207,11 +216,13 @@ Status LiveRuntime::correct(const station::v1::Correction& word) {
 
 void LiveRuntime::tick(const io::TickEvent& event) {
   if (event.now_ns - utc_checked_ns_ >= ns_per_s) check_utc();
-  if (capture_lost_ > 0) {
+  if (capture_failing_ || capture_lost_ > 0) {
+    const std::uint64_t told = capture_lost_;
     station::v1::StationRecord gap;
-    gap.mutable_capture_gap()->set_records_lost(capture_lost_);
-    capture_lost_ = 0;
+    gap.mutable_capture_gap()->set_records_lost(told);
     accept_station(gap, event.now_ns);
+    // Written: the capture tells of them from here on. Not written: it is one more that is lost.
+    if (capture_lost_ == told) capture_lost_ = 0;
   }
   station::v1::StationRecord tick;
   tick.mutable_tick();
@@ -239,8 +250,10 @@ void LiveRuntime::flush_capture() {
 void LiveRuntime::accept(const RawRecord& record, const capture::UdpPath& path) {
   if (capture_) {
     const Status written = capture_->write({record, path});
-    if (!written) ++capture_lost_;
-    note_capture(written);
+    if (!written) {
+      ++capture_lost_;
+      note_capture(written);
+    }
   }
   conduit_.accept(record);
 }
@@ -250,11 +263,11 @@ void LiveRuntime::accept_station(const station::v1::StationRecord& record, TimeN
   accept({time_ns, station_source, sequences_[station_source]++, std::as_bytes(std::span(station_bytes_))}, {});
 }
 
-void LiveRuntime::note_capture(const Status& written) {
-  if (written.ok() == !capture_failing_) return;
-  capture_failing_ = !written.ok();
+void LiveRuntime::note_capture(const Status& flushed) {
+  if (flushed.ok() == !capture_failing_) return;
+  capture_failing_ = !flushed.ok();
   if (capture_failing_) {
-    spdlog::error("capture: {}; tracking goes on without it", written.error());
+    spdlog::error("capture: {}; tracking goes on without it", flushed.error());
   } else {
     spdlog::info("capture: writing again");
   }

@@ -62,7 +62,7 @@ class LiveRuntime : private io::LinkEvents, private feed::MessageSink {
   void stop(int signal);
   void accept(const RawRecord& record, const capture::UdpPath& path);
   void accept_station(const station::v1::StationRecord& record, TimeNs time_ns);
-  void note_capture(const Status& written);
+  void note_capture(const Status& flushed);
 
   const config::v1::Configuration configuration_;
   const std::string stream_path_;
@@ -78,7 +78,7 @@ class LiveRuntime : private io::LinkEvents, private feed::MessageSink {
 
   capture::FileSink capture_file_;
   std::optional<capture::CaptureWriter> capture_;
-  std::uint64_t capture_lost_ = 0;  ///< records not written and not yet told
+  std::uint64_t capture_lost_ = 0;  ///< records not written, of which the capture does not tell yet
   bool capture_failing_ = false;
 
   std::vector<std::unique_ptr<io::Link>> links_;
@@ -89,6 +89,8 @@ class LiveRuntime : private io::LinkEvents, private feed::MessageSink {
   io::Readiness readiness_;
   io::UtcWatch utc_watch_;
   TimeNs utc_checked_ns_ = 0;
+  TimeNs shed_logged_ns_ = 0;
+  std::uint64_t shed_unlogged_ = 0;
   std::string station_bytes_;  ///< reused
 };
 

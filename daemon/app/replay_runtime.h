@@ -18,7 +18,8 @@ struct ReplaySummary {
   std::uint64_t messages = 0;
   std::uint64_t damaged_places = 0;
   std::uint64_t bytes_lost = 0;
-  TimeNs first_ns = 0;  ///< of the first and last record, station time
+  std::uint64_t records_missing = 0;  ///< by their numbers
+  TimeNs first_ns = 0;                ///< of the first and last record, station time
   TimeNs last_ns = 0;
 };
 
@@ -32,8 +33,8 @@ using Pace = std::function<void(TimeNs)>;
 /// Called for each damaged stretch.
 using DamageLog = std::function<void(const capture::Damage&)>;
 
-/// Passes every record to the conduit, in the capture's order. A damaged stretch becomes a CaptureGap
-/// record in its place, so that the station's health says so.
+/// Passes every record to the conduit, in the capture's order. Records whose numbers show that others are
+/// missing before them are preceded by a CaptureGap record, so that the station's health says so.
 ReplaySummary replay(capture::CaptureReader& reader, Conduit& conduit, const Pace& pace, const DamageLog& damage_log);
 
 }  // namespace kedge::app

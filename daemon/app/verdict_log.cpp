@@ -18,7 +18,8 @@ void VerdictLog::note(const pipeline::Verdict& verdict) {
   }
   const std::string text = verdict.text.empty() ? "" : fmt::format(": {}", verdict.text);
   const std::string more = last.left_out > 0 ? fmt::format(" ({} more since the last)", last.left_out) : "";
-  spdlog::warn("device {}: {}{}{}", verdict.device_id, word(verdict.code), text, more);
+  const std::string who = verdict.device_id == 0 ? "input" : fmt::format("device {}", verdict.device_id);
+  spdlog::warn("{}: {}{}{}", who, word(verdict.code), text, more);
   last = {verdict.arrival_ns, 0};
 }
 

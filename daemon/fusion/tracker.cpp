@@ -2,6 +2,7 @@
 
 #include <algorithm>
 #include <cmath>
+#include <utility>
 
 namespace kedge::fusion {
 
@@ -315,12 +316,18 @@ void Tracker::constrain_sideways() {
 void Tracker::wake() {
   AttitudeFilter& attitude = state_.attitude;
   if (!attitude.levelled()) return;
-  const Start* start = state_.first && tag_.start ? &*tag_.start : nullptr;
+  std::optional<Start> start = state_.first ? tag_.start : std::nullopt;
   const bool waits_for_field = tag_.magnetometer && state_.time_ns - state_.begun_ns < field_wait_ns;
   if (!attitude.aligned && waits_for_field) return;
-  if (start != nullptr && start->heading_rad) correct_heading(*start->heading_rad, start->heading_sigma_rad);
+  if (const auto word = std::exchange(state_.word, std::nullopt)) {
+    // An operator's word outranks the configuration.
+    if (word->heading_rad) correct_heading(*word->heading_rad, word->heading_sigma_rad);
+    if (word->position_m) start = Start{*word->position_m, word->position_sigma_m, std::nullopt, 0.0};
+    if (start && word->heading_rad) start->heading_rad.reset();
+  }
+  if (start && start->heading_rad) correct_heading(*start->heading_rad, start->heading_sigma_rad);
   state_.phase = Phase::ring;
-  if (start == nullptr || !attitude.aligned) return;
+  if (!start || !attitude.aligned) return;
   double nearest_m = 1e9;
   for (const Anchor& anchor : site_.anchors) {
     nearest_m = std::min(nearest_m, (anchor.position_m.head<2>() - start->position_m).norm());

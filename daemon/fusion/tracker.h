@@ -93,13 +93,16 @@ struct TrackerState {
   TimeNs travel_ns = 0;
   double travel_turned_rad = 0.0;
 
+  std::optional<CorrectionMeasurement> word;  ///< an operator's, said while waking
+
   template <class Archive>
   void fields(Archive& archive) {
     archive(time_ns, begun, first, phase, begun_ns, attitude, stops, motion, gained_mps, inertial, has_inertial,
             inertial_ns, at_rest, quiet_since_ns, quiet, moved, calm, rest_force_mps2, hypotheses, twins,
             lopsided_since_ns, sideways_ns, path_s, window, window_anchor, window_try_ns, speed_fused_ns,
             speeds_refused, check, obstructed, range_ns, range_used_ns, ranges_refused, range_excess_m,
-            range_gated_share, ring_radius_m, airborne, pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad);
+            range_gated_share, ring_radius_m, airborne, pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad,
+            word);
   }
 };
 

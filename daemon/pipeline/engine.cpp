@@ -1,9 +1,10 @@
 #include "pipeline/engine.h"
 
-#include <fmt/core.h>
+#include <fmt/format.h>
 
 #include <algorithm>
 #include <deque>
+#include <iterator>
 #include <limits>
 #include <string_view>
 
@@ -90,8 +91,7 @@ class Engine::State : public wire::PacketSink {
       return tell(VerdictCode::malformed, 0, "a record of a source that is not configured");
     }
     if (settings.links[record.source - 1].kind == LinkKind::udp) return decoder_.decode(record.bytes, *this);
-    deframers_[record.source - 1].push(record.bytes,
-                                       [&](std::span<const std::byte> datagram) { decoder_.decode(datagram, *this); });
+    deframe(record);
   }
 
   void save(Saver& saver) {
@@ -129,7 +129,7 @@ class Engine::State : public wire::PacketSink {
     Device* device = devices_.find(packet.device_id);
     if (device == nullptr) {
       devices_.note_unknown(packet.device_id);
-      return tell(VerdictCode::unknown_device, packet.device_id, "");
+      return tell(VerdictCode::unknown_device, packet.device_id, "no tag and no anchor has this device_id");
     }
     const auto* batch = std::get_if<wire::InertialBatch>(&packet.body);
     const std::uint32_t span_us = batch != nullptr ? (batch->count - 1) * batch->sample_interval_us : 0;
@@ -138,7 +138,8 @@ class Engine::State : public wire::PacketSink {
       device->sequence.forget();
     }
     if (!device->sequence.note(packet.sequence, arrival_ns_, settings.limits.rate_window_ns)) {
-      return tell(VerdictCode::duplicate, packet.device_id, "");
+      say("sequence number {} came before", packet.sequence);
+      return tell(VerdictCode::duplicate, packet.device_id, said());
     }
     std::visit([&](const auto& body) { take(*device, mapped.time_ns, body); }, packet.body);
   }
@@ -157,6 +158,21 @@ class Engine::State : public wire::PacketSink {
     for (wire::Deframer& deframer : deframers_) archive(deframer);
     for (AnchorWatch& anchor : anchors_) archive(anchor);
     archive(devices_, station_, now_ns_, arrival_ns_, first_tick_ns_, anchors_health_ns_, station_health_ns_);
+  }
+
+  void deframe(const RawRecord& record) {
+    wire::Deframer& deframer = deframers_[record.source - 1];
+    const wire::DeframerCounters before = deframer.counters();
+    deframer.push(record.bytes, [&](std::span<const std::byte> datagram) { decoder_.decode(datagram, *this); });
+    const wire::DeframerCounters& after = deframer.counters();
+    const std::uint64_t dropped = after.bytes_dropped - before.bytes_dropped;
+    if (dropped == 0) return;
+    station_.refused();
+    say("link {}: {} bytes that are no frame ({} with a wrong check, {} malformed, {} too long): noise, another baud "
+        "rate, or bytes lost",
+        settings.links[record.source - 1].name, dropped, after.crc_failures - before.crc_failures,
+        after.malformed - before.malformed, after.oversize - before.oversize);
+    tell(VerdictCode::malformed, 0, said());
   }
 
   void take(const Device& device, TimeNs first_ns, const wire::InertialBatch& batch) {
@@ -187,7 +203,8 @@ class Engine::State : public wire::PacketSink {
     const Device* subject = range.tag_device_id == device.device_id ? &device : devices_.find(range.tag_device_id);
     if (subject == nullptr || !subject->tag) {
       devices_.note_unknown(range.tag_device_id);
-      return tell(VerdictCode::unknown_device, range.tag_device_id, "");
+      say("named by a range of device {}; no tag has this device_id", device.device_id);
+      return tell(VerdictCode::unknown_device, range.tag_device_id, said());
     }
     const auto& anchors = settings.site.anchors;
     const auto anchor = std::find_if(anchors.begin(), anchors.end(),
@@ -196,7 +213,8 @@ class Engine::State : public wire::PacketSink {
     unit.watch.heard_range(arrival_ns_);
     if (anchor == anchors.end()) {
       unit.watch.refused_range();
-      return tell(VerdictCode::unknown_anchor, device.device_id, "", subject->tag);
+      say("range to anchor {}: no anchor has this anchor_id", range.anchor_id);
+      return tell(VerdictCode::unknown_anchor, device.device_id, said(), subject->tag);
     }
     const auto index = static_cast<std::uint32_t>(anchor - anchors.begin());
     anchors_[index].heard(*subject->tag, arrival_ns_);
@@ -207,7 +225,8 @@ class Engine::State : public wire::PacketSink {
     measurement.sigma_m = std::max(anchor->range_sigma_m, range.sigma_m.value_or(0.0));
     if (range.range_m > settings.limits.range_max_m) {
       unit.watch.refused_range();
-      return tell(VerdictCode::beyond_range_max, device.device_id, "", subject->tag);
+      say("range {:.1f} m is beyond range_max_m {:g}", range.range_m, settings.limits.range_max_m);
+      return tell(VerdictCode::beyond_range_max, device.device_id, said(), subject->tag);
     }
     const TimeNs lag_ns = settings.tags[*subject->tag].range_lag_ns;
     file(*subject->tag, {time_ns - lag_ns, measurement}, device.device_id);
@@ -231,6 +250,13 @@ class Engine::State : public wire::PacketSink {
     verdict.device_id = device_id;
     verdict.tag = tag;
     verdict.code = code;
+    if (code == VerdictCode::too_late) {
+      say("measured {:.3f} s before it arrived, delay_max_s is {:g}", seconds(arrival_ns_ - measurement.time_ns),
+          seconds(settings.limits.delay_max_ns));
+    } else {
+      say("measured {:.3f} s after it arrived", seconds(measurement.time_ns - arrival_ns_));
+    }
+    verdict.text = said();
     sink_.verdict(verdict);
   }
 
@@ -249,6 +275,14 @@ class Engine::State : public wire::PacketSink {
     verdict.outcome = outcome;
     sink_.verdict(verdict);
   }
+
+  /// Writes a verdict's text into a buffer that is reused.
+  template <class... Ts>
+  void say(fmt::format_string<Ts...> format, Ts&&... values) {
+    text_.clear();
+    fmt::format_to(std::back_inserter(text_), format, std::forward<Ts>(values)...);
+  }
+  [[nodiscard]] std::string_view said() const { return {text_.data(), text_.size()}; }
 
   void tell(VerdictCode code, wire::DeviceId device_id, std::string_view text, std::optional<std::uint32_t> tag = {}) {
     Verdict verdict;
@@ -329,19 +363,20 @@ class Engine::State : public wire::PacketSink {
   void publish(std::uint32_t tag, bool anchors_silent) {
     TagUnit& unit = tags_[tag];
     unit.track.advance();
-    const fusion::Estimate estimate = unit.track.estimate();
+    const std::optional<fusion::Estimate> estimate = unit.track.estimate();
     Device* device = devices_.find(settings.tags[tag].device_id);
     const DeviceFigures figures = device->figures(now_ns_, settings.limits.rate_window_ns);
     const bool restarted = unit.track.restarts() != unit.restarts_told;
     unit.restarts_told = unit.track.restarts();
-    const bool changed = unit.watch.update(estimate, figures, anchors_silent, now_ns_) || restarted;
+    const bool changed =
+        unit.watch.update(estimate.value_or(fusion::Estimate{}), figures, anchors_silent, now_ns_) || restarted;
     const Standing standing = unit.watch.standing();
-    if (standing != Standing::silent && (changed || estimate.time_ns > unit.published_ns)) {
-      unit.published_ns = estimate.time_ns;
+    if (standing != Standing::silent && estimate && (changed || estimate->time_ns > unit.published_ns)) {
+      unit.published_ns = estimate->time_ns;
       TrackReport report;
       report.tag = tag;
       report.standing = standing;
-      report.estimate = estimate;
+      report.estimate = *estimate;
       report.radius_95_m = unit.watch.radius_95_m();
       sink_.publish(report);
     }
@@ -368,6 +403,7 @@ class Engine::State : public wire::PacketSink {
   std::deque<TagUnit> tags_;  ///< a deque, since units do not move
   std::deque<AnchorWatch> anchors_;
   station::v1::StationRecord station_record_;  ///< reused
+  fmt::memory_buffer text_;                    ///< of the verdict being told
   TimeNs now_ns_ = std::numeric_limits<TimeNs>::min();
   TimeNs arrival_ns_ = 0;
   std::optional<TimeNs> first_tick_ns_;

@@ -3,6 +3,7 @@
 
 #include <array>
 #include <cstdint>
+#include <utility>
 
 #include "core/time.h"
 #include "pipeline/rate_window.h"
@@ -11,10 +12,14 @@ namespace kedge::pipeline {
 
 class SequenceTracker {
  public:
-  /// Notes a packet; false when this number was seen among the last 256.
+  /// Notes a packet; false when this number was seen among the last 256, or lies so far behind them that it
+  /// cannot be told. A second one that far behind is a device that began anew.
   bool note(std::uint32_t sequence, TimeNs now_ns, TimeNs window_ns) {
     const auto ahead = static_cast<std::int32_t>(sequence - highest_);
-    if (!started_ || ahead > jump_max || ahead <= -window) {
+    const bool far_behind = started_ && ahead <= -window;
+    if (far_behind && !std::exchange(stray_, true)) return false;
+    stray_ = false;
+    if (!started_ || ahead > jump_max || far_behind) {
       begin(sequence);
       sent_.add(now_ns, window_ns);
       received_.add(now_ns, window_ns);
@@ -44,7 +49,7 @@ class SequenceTracker {
 
   template <class Archive>
   void fields(Archive& archive) {
-    archive(seen_, highest_, started_, sent_, received_);
+    archive(seen_, highest_, started_, stray_, sent_, received_);
   }
 
  private:
@@ -70,6 +75,7 @@ class SequenceTracker {
   std::array<std::uint64_t, window / 64> seen_{};
   std::uint32_t highest_ = 0;
   bool started_ = false;
+  bool stray_ = false;  ///< the packet before this one lay far behind
   RateWindow sent_;
   RateWindow received_;
 };

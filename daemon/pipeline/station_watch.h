@@ -25,16 +25,18 @@ class StationWatch {
   void shed(std::uint64_t records, TimeNs now_ns) {
     shed_.add(now_ns, limits_.rate_window_ns, static_cast<double>(records));
   }
+  /// `records` may be 0: the disk refuses, nothing is lost yet.
   void capture_gap(std::uint64_t records, TimeNs now_ns) {
-    capture_lost_.add(now_ns, limits_.rate_window_ns, static_cast<double>(records));
+    capture_gaps_.add(now_ns, limits_.rate_window_ns);
+    capture_lost_ = static_cast<double>(records);
   }
   void synchronised(bool synchronised) { synchronised_ = synchronised; }
 
   bool update(TimeNs now_ns) {
     const double shed = shed_.total(now_ns, limits_.rate_window_ns);
     concerns_.note(Concern::overload, shed > 0.0, shed, now_ns);
-    const double lost = capture_lost_.total(now_ns, limits_.rate_window_ns);
-    concerns_.note(Concern::capture_failing, lost > 0.0, lost, now_ns);
+    const bool failing = capture_gaps_.total(now_ns, limits_.rate_window_ns) > 0.0;
+    concerns_.note(Concern::capture_failing, failing, capture_lost_, now_ns);
     const auto closed = std::find(open_.begin(), open_.end(), false);
     concerns_.note(Concern::link_down, closed != open_.end(), static_cast<double>(closed - open_.begin() + 1), now_ns,
                    {0, 0});
@@ -61,7 +63,7 @@ class StationWatch {
       archive(open);
       open_[i] = open;
     }
-    archive(concerns_, shed_, capture_lost_, records_, packets_, refused_, synchronised_);
+    archive(concerns_, shed_, capture_gaps_, capture_lost_, records_, packets_, refused_, synchronised_);
   }
 
  private:
@@ -69,7 +71,8 @@ class StationWatch {
   ConcernBook concerns_;
   std::vector<bool> open_;
   RateWindow shed_;
-  RateWindow capture_lost_;
+  RateWindow capture_gaps_;
+  double capture_lost_ = 0.0;  ///< records, as told last
   std::uint64_t records_ = 0;
   std::uint64_t packets_ = 0;
   std::uint64_t refused_ = 0;

@@ -43,6 +43,13 @@ VerdictCode Track::file(const fusion::Measurement& measurement, TimeNs arrival_n
   return VerdictCode::used;
 }
 
+std::optional<fusion::Estimate> Track::estimate() const {
+  if (applied_ == beginning) return std::nullopt;
+  fusion::Estimate estimate = estimator_->estimate();
+  estimate.time_ns = applied_.time_ns;
+  return estimate;
+}
+
 void Track::make_room() {
   // Without a tick for so long the oldest would be lost unapplied.
   if (history_[0].key > applied_) advance();

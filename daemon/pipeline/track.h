@@ -10,6 +10,7 @@
 #include <functional>
 #include <limits>
 #include <memory>
+#include <optional>
 #include <vector>
 
 #include "fusion/estimator.h"
@@ -36,7 +37,9 @@ class Track {
   /// Applies all that was filed, in order.
   void advance();
 
-  [[nodiscard]] fusion::Estimate estimate() const { return estimator_->estimate(); }
+  /// At the time of the newest applied measurement, also where the estimator has just begun anew; nothing
+  /// before the first measurement.
+  [[nodiscard]] std::optional<fusion::Estimate> estimate() const;
   [[nodiscard]] std::uint32_t restarts() const { return restarts_; }
 
   void save(Saver& saver);

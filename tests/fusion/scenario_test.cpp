@@ -20,7 +20,7 @@ double mean(const std::vector<Score>& scores, double Score::*part) {
 
 }  // namespace
 
-TEST_CASE("speed-aided from a known start: error limit and coverage of each scenario") {
+TEST_CASE("speed-aided from a known start: error limit and coverage of each scenario", "[statistics]") {
   struct Limit {
     Scenario scenario;
     double median_m;
@@ -43,7 +43,7 @@ TEST_CASE("speed-aided from a known start: error limit and coverage of each scen
   }
 }
 
-TEST_CASE("from an unknown start the triangle is found and seldom confidently wrong") {
+TEST_CASE("from an unknown start the triangle is found and seldom confidently wrong", "[statistics]") {
   const std::vector<Score> scores = run_scenarios(Scenario::triangle, runs, first_seed, false);
   CHECK(median_rms(scores) <= 1.5);
   CHECK(mean(scores, &Score::located) > 0.95);

@@ -1,30 +1,16 @@
 #include "fusion/tracker.h"
 
-#include <atomic>
 #include <catch2/catch.hpp>
 #include <cstdlib>
 #include <limits>
-#include <new>
 #include <span>
 
 #include "simulation/sensors.h"
+#include "support/count_allocations.h"
 
 using namespace kedge;
 using namespace kedge::fusion;
 using simulation::Scenario;
-
-namespace {
-std::atomic<long> allocations{0};
-}  // namespace
-
-// Counted, so that a test can see that the hot path asks for no memory.
-void* operator new(std::size_t size) {
-  ++allocations;
-  if (void* memory = std::malloc(size)) return memory;
-  throw std::bad_alloc();
-}
-void operator delete(void* memory) noexcept { std::free(memory); }
-void operator delete(void* memory, std::size_t) noexcept { std::free(memory); }
 
 namespace {
 
@@ -103,13 +89,13 @@ TEST_CASE("a checkpoint cut short is refused") {
 TEST_CASE("applying and estimating allocate nothing") {
   const Rig rig(Scenario::triangle, 6, false);
   Tracker tracker(rig.spec.site, rig.tag);
-  const long before = allocations;
+  const std::size_t before = test::allocations;
   for (const Measurement& measurement : rig.measurements) {
     tracker.apply(measurement);
     tracker.keep(1);
     static_cast<void>(tracker.estimate());
   }
-  CHECK(allocations == before);
+  CHECK(test::allocations == before);
 }
 
 TEST_CASE("what is not finite or cannot be is implausible and changes nothing but time") {

@@ -13,7 +13,7 @@ constexpr int runs = 40;
 constexpr std::uint64_t first_seed = 2000;  // never used in tuning
 }  // namespace
 
-TEST_CASE("speed-aided on a triangle: 1 m RMS, more than three times better than plain") {
+TEST_CASE("speed-aided on a triangle: 1 m RMS, more than three times better than plain", "[statistics]") {
   const auto aided = run_scenarios(simulation::Scenario::triangle, runs, first_seed, true);
   const auto plain = run_scenarios(simulation::Scenario::triangle, runs, first_seed, true, Method::plain);
   CAPTURE(median_rms(aided), median_rms(plain));
@@ -21,7 +21,7 @@ TEST_CASE("speed-aided on a triangle: 1 m RMS, more than three times better than
   CHECK(median_rms(plain) > 3.0 * median_rms(aided));
 }
 
-TEST_CASE("plain on a triangle: about 2.8 m where the run is short") {
+TEST_CASE("plain on a triangle: about 2.8 m where the run is short", "[statistics]") {
   // A plain filter's error grows without bound, so its figure means something for one length of run only. The
   // trade does not say which; it is met by runs of some 18 s, and passed threefold within the minute.
   const auto brief = run_scenarios(simulation::Scenario::triangle, runs, first_seed, true, Method::plain, 18.0);

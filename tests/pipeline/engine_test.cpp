@@ -112,6 +112,7 @@ TEST_CASE("a sick filter restarts its own tag and touches no other") {
   Reports sick;
   run(well, 1'000'000);
   run(sick, 1000);
+  for (const TrackReport& report : sick.tracks) CHECK(report.estimate.time_ns >= start_ns);
   CHECK(well.of_tag(0).back().restarts == 0);
   CHECK(sick.of_tag(0).back().restarts == 1);
   CHECK(sick.of_tag(1).back().restarts == 0);
@@ -155,6 +156,7 @@ TEST_CASE("each packet that is refused says why") {
 
   send(feeder, start_ns + 2 * ns_per_ms, distance_packet(11, 3, 3000, 812.4F));
   CHECK(reports.count(VerdictCode::beyond_range_max) == 1);
+  CHECK(reports.texts.back() == "range 812.4 m is beyond range_max_m 300");
 
   send(feeder, start_ns + 3 * ns_per_ms, distance_packet(11, 4, 4000, std::numeric_limits<float>::quiet_NaN()));
   CHECK(reports.count(VerdictCode::implausible) == 1);
@@ -292,6 +294,36 @@ TEST_CASE("an operator's word moves the tag") {
   feeder.station(start_ns + 10 * ns_per_s, record);
   feeder.run(fleet, start_ns + 10 * ns_per_s + 200 * ns_per_ms);
   CHECK((reports.tracks.back().estimate.lead.position_m.head<2>() - there).norm() < 2.0);
+}
+
+TEST_CASE("an operator's word to a tag that is still waking is its start") {
+  simulation::ScenarioSpec spec = carts(1, 12.0)[0];
+  const simulation::Vehicle truth(spec);
+  Reports reports;
+  Engine engine(settings_of({spec}, false), reports);
+  simulation::Fleet fleet({spec});
+  Feeder feeder(engine);
+  station::v1::StationRecord record;
+  record.mutable_correction()->set_tag("cart-1");
+  record.mutable_correction()->set_east_m(truth.at(start_ns).position_m.x());
+  record.mutable_correction()->set_north_m(truth.at(start_ns).position_m.y());
+  feeder.station(start_ns, record);
+  feeder.run(fleet, start_ns + 12 * ns_per_s);
+  CHECK(reports.tracks.back().standing == Standing::settled);
+}
+
+TEST_CASE("noise on a serial line is counted and told") {
+  Settings settings = settings_of(carts(1, 1.0));
+  settings.links.push_back({"dock", LinkKind::serial});
+  Reports reports;
+  Engine engine(settings, reports);
+  const std::string noise = "\x05garbage" + std::string(1, '\0') + "more" + std::string(1, '\0');
+  engine.accept({start_ns, 2, 0, std::as_bytes(std::span(noise))});
+  REQUIRE(reports.count(VerdictCode::malformed) == 1);
+  CHECK(reports.texts.back().find("link dock: 14 bytes that are no frame") == 0);
+  Feeder feeder(engine);
+  feeder.tick(start_ns + ns_per_s);
+  CHECK(reports.stations.back().packets_refused == 1);
 }
 
 TEST_CASE("an engine that loads a checkpoint goes on to the same reports") {

@@ -72,8 +72,17 @@ TEST_CASE("a far jump of the sequence is a new start, not thousands lost") {
   SequenceTracker tracker;
   CHECK(tracker.note(100, 0, window_ns));
   CHECK(tracker.note(1'000'000, 0, window_ns));
-  CHECK(tracker.note(7, 0, window_ns));
+  CHECK_FALSE(tracker.note(7, 0, window_ns));  // one could be very late; two are a device that began anew
   CHECK(tracker.note(8, 0, window_ns));
+  CHECK(tracker.note(9, 0, window_ns));
+  CHECK(tracker.missing_share(0, window_ns) == 0.0);
+}
+
+TEST_CASE("one very late packet is not a new start") {
+  SequenceTracker tracker;
+  for (std::uint32_t i = 1000; i < 1400; ++i) CHECK(tracker.note(i, 0, window_ns));
+  CHECK_FALSE(tracker.note(1050, 0, window_ns));
+  CHECK(tracker.note(1400, 0, window_ns));
   CHECK(tracker.missing_share(0, window_ns) == 0.0);
 }
 

@@ -115,7 +115,7 @@ TEST_CASE("vibration only while moving") {
   CHECK(statistics_of(moving).sigma == Approx(0.3).epsilon(sigma_tolerance(static_cast<double>(moving.size()))));
 }
 
-TEST_CASE("the magnetic heading is off by a white and a slow part") {
+TEST_CASE("the magnetic heading is off by a white and a slow part", "[statistics]") {
   std::vector<double> errors_rad;
   std::vector<double> steps_rad;
   for (std::uint64_t seed = 1; seed <= 60; ++seed) {

@@ -101,6 +101,16 @@ class BadInput(unittest.TestCase):
             self.assertGreater(len(replayed), 20)
             self.assertEqual(replayed, live[:len(replayed)])
 
+    def test_a_replay_never_overwrites_its_capture(self):
+        with Station() as station:
+            station.simulate("--seconds", 3)
+            self.assertEqual(station.stop(), 0)
+            before = station.capture().read_bytes()
+            done = run(tool("replay"), station.capture(), "--out", station.capture())
+            self.assertEqual(done.returncode, 2)
+            self.assertIn("is the capture itself", done.stderr)
+            self.assertEqual(station.capture().read_bytes(), before)
+
     def test_a_socket_path_that_someone_listens_on_is_left_alone(self):
         with Station() as station:
             other = self.folder / "taken.sock"

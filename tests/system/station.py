@@ -77,10 +77,10 @@ tags {{ name: "cart-{i + 1}" device_id: {11 + i} profile: wheeled magnetometer {
 '''
         return text
 
-    def start(self, **more):
+    def start(self, *options, **more):
         with self.log_path.open("a", encoding="utf-8") as log:
             self.process = subprocess.Popen(
-                [str(KEDGED), str(self.config), "--stream", str(self.stream)], stderr=log, **more)
+                [str(KEDGED), str(self.config), *(options or ("--stream", str(self.stream)))], stderr=log, **more)
         wait_for(lambda: " ready: " in self.log() or self.process.poll() is not None, 10, "the daemon is ready")
         assert self.process.poll() is None, self.log()
         return self

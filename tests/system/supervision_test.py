@@ -2,6 +2,7 @@
 
 import os
 import re
+import resource
 import shutil
 import signal
 import socket
@@ -10,7 +11,7 @@ import tempfile
 import time
 import unittest
 
-from station import BIN, ROOT, Station, run
+from station import BIN, ROOT, JsonClient, Station, run
 
 
 class Supervision(unittest.TestCase):
@@ -47,6 +48,31 @@ class Supervision(unittest.TestCase):
             station.simulate("--seconds", 3)
             self.assertEqual(station.stop(signal.SIGINT), 0)
             self.assertEqual(station.replay(), station.stream.read_bytes())
+
+    def test_a_full_disk_is_told_and_tracking_goes_on(self):
+        def small_disk():
+            # The same refusal as a full disk's: no file may grow beyond 150 kB.
+            signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
+            resource.setrlimit(resource.RLIMIT_FSIZE, (150_000, 150_000))
+
+        station = Station()
+        try:
+            station.start("--log-level", "info", preexec_fn=small_disk)
+            simulator = station.simulate("--seconds", 25, wait=False)
+            client = JsonClient(station.tcp_port, timeout=25)
+            client.read_until(lambda m: "capture_failing" in [c["concern"] for c in m.get("health", {}).get("concerns", [])],
+                              seconds=25)
+            client.read_until(lambda m: m.get("position", {}).get("standing") == "settled")
+            client.close()
+            simulator.wait(timeout=30)
+            self.assertEqual(station.stop(), 1)
+            log = station.log()
+            self.assertEqual(log.count("tracking goes on without it"), 1, log)
+            self.assertNotIn("writing again", log)
+            # What was written before is whole.
+            self.assertGreater(len(station.replay().splitlines()), 50)
+        finally:
+            station.__exit__()
 
     @unittest.skipUnless(shutil.which("systemd-analyze"), "skipped: no systemd-analyze")
     def test_the_unit_file_is_good(self):

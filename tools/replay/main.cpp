@@ -4,6 +4,8 @@
 
 #include <chrono>
 #include <cstdio>
+#include <filesystem>
+#include <string>
 #include <thread>
 
 #include "app/message_file.h"
@@ -55,6 +57,20 @@ void compare_build(const kedge::capture::CaptureHead& head) {
   differ("processor features", head.features, kedge::app::processor_features());
 }
 
+void report(const kedge::app::ReplaySummary& summary, const kedge::app::Conduit& conduit) {
+  fmt::print(stderr,
+             "{} records over {:.1f} s gave {} messages; {} damaged places, {} bytes lost, {} records missing\n",
+             summary.records, kedge::seconds(summary.last_ns - summary.first_ns), summary.messages,
+             summary.damaged_places, summary.bytes_lost, summary.records_missing);
+  std::string verdicts;
+  for (std::size_t i = 0; i < kedge::app::verdict_count; ++i) {
+    const auto code = static_cast<kedge::pipeline::VerdictCode>(i);
+    if (conduit.verdicts(code) == 0) continue;
+    verdicts += fmt::format("{}{} {}", verdicts.empty() ? "" : ", ", kedge::app::word(code), conduit.verdicts(code));
+  }
+  fmt::print(stderr, "verdicts: {}\n", verdicts.empty() ? "none" : verdicts);
+}
+
 int replay(const Options& options) {
   std::optional<kedge::config::v1::Configuration> other;
   if (!options.config.empty()) {
@@ -71,6 +87,10 @@ int replay(const Options& options) {
   kedge::Result<kedge::pipeline::Settings> settings = kedge::app::replay_settings(reader->head(), other);
   if (!settings) return fail(exit_failure, fmt::format("{}: {}", options.capture, settings.error()));
 
+  std::error_code absent;
+  if (std::filesystem::equivalent(options.capture, options.out, absent)) {
+    return fail(exit_usage, fmt::format("--out {} is the capture itself; name another file", options.out));
+  }
   kedge::app::MessageFile out;
   if (const kedge::Status opened = out.open(options.out); !opened) return fail(exit_failure, opened.error());
   kedge::app::Conduit conduit(std::move(*settings), out);
@@ -80,9 +100,7 @@ int replay(const Options& options) {
                    damage.reason);
       });
   if (const kedge::Status closed = out.close(); !closed) return fail(exit_failure, closed.error());
-  fmt::print(stderr, "{} records over {:.1f} s gave {} messages; {} damaged places, {} bytes lost\n", summary.records,
-             kedge::seconds(summary.last_ns - summary.first_ns), summary.messages, summary.damaged_places,
-             summary.bytes_lost);
+  report(summary, conduit);
   return 0;
 }
 
