@@ -133,7 +133,8 @@ TEST_CASE("the first measurement may be of any kind, and times may be equal") {
   const Rig rig;
   const MeasurementBody firsts[] = {
       RangeMeasurement{0, 20.0, 0.1}, PressureMeasurement{101325.0}, TravelMeasurement{100 * ns_per_ms, 0.1, 0.0},
-      CorrectionMeasurement{Vector2(1, 2), std::nullopt, 0.5, 0.3, 0.1}, InertialMeasurement{}};
+      CorrectionMeasurement{rig.tag.start->position_m, std::nullopt, 0.5, rig.tag.start->heading_rad, 0.1},
+      InertialMeasurement{}};
   for (const MeasurementBody& first : firsts) {
     Tracker tracker(rig.spec.site, rig.tag);
     tracker.apply({rig.spec.start_ns, first});
