@@ -36,6 +36,7 @@ feed::OutboxLimits outbox_limits(const config::v1::Feed& feed) {
 
 std::vector<capture::Link> capture_links(const pipeline::Settings& settings) {
   std::vector<capture::Link> links;
+  links.reserve(settings.links.size());
   for (const pipeline::LinkSettings& link : settings.links) {
     links.push_back(
         {link.name, link.kind == pipeline::LinkKind::udp ? capture::LinkKind::udp : capture::LinkKind::serial});

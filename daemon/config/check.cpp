@@ -227,6 +227,12 @@ class Checker {
     if (start.has_heading_sigma_deg() && !start.has_heading_deg()) {
       add(path + ".start.heading_deg", "is missing; heading_sigma_deg has no meaning without it");
     }
+    if (const double delay_max_s = limit("delay_max_s"); tag.range_lag_s() > delay_max_s) {
+      add(path + ".range_lag_s",
+          fmt::format("does not fit: range_lag_s {} s is above limits.delay_max_s {} s, so every range would come too "
+                      "late to be used",
+                      tag.range_lag_s(), delay_max_s));
+    }
     const v1::Magnetometer& magnetometer = tag.magnetometer();
     const int hard = magnetometer.hard_iron_ut_size();
     if (hard != 0 && hard != 3) {
@@ -283,19 +289,21 @@ class Checker {
     }
   }
 
-  void limits() {
+  /// A number of the limits, its default where it is not written.
+  double limit(const char* name) const {
     const v1::Limits& limits = c_.limits();
-    const auto value = [&](const char* name) {
-      const FieldDescriptor& field = *limits.GetDescriptor()->FindFieldByName(name);
-      const pb::Reflection& reflection = *limits.GetReflection();
-      return reflection.HasField(limits, &field) ? reflection.GetDouble(limits, &field) : rule_of(field).standard;
-    };
+    const FieldDescriptor& field = *limits.GetDescriptor()->FindFieldByName(name);
+    const pb::Reflection& reflection = *limits.GetReflection();
+    return reflection.HasField(limits, &field) ? reflection.GetDouble(limits, &field) : rule_of(field).standard;
+  }
+
+  void limits() {
     const auto ordered = [&](const char* low, const char* high, const char* unit) {
-      // Not above, the default counted where one is not written; a number out of range is told elsewhere.
-      if (!(value(low) > value(high))) return;
+      // A number out of range is told elsewhere.
+      if (!(limit(low) > limit(high))) return;
       const std::string blamed = source_.places.contains(join("limits", high)) ? high : low;
       add(join("limits", blamed),
-          fmt::format("does not fit: {} {} {} is above {} {} {}", low, value(low), unit, high, value(high), unit));
+          fmt::format("does not fit: {} {} {} is above {} {} {}", low, limit(low), unit, high, limit(high), unit));
     };
     ordered("settled_enter_m", "settled_leave_m", "m");
     ordered("settled_leave_m", "lost_radius_m", "m");

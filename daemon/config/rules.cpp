@@ -7,20 +7,25 @@
 
 #include "core/assert.h"
 #include "core/physics.h"
+#include "pipeline/correction.h"
 #include "proto/config.pb.h"
 
 namespace kedge::config {
 namespace {
 
 constexpr double number_max = std::numeric_limits<std::uint32_t>::max();
-constexpr double level_max_m = 100e3;  // beyond, a flat site is no model of the ground
-constexpr double up_max_m = 10e3;
 
 constexpr Rule required(std::string_view field, std::string_view unit, double low, double high) {
   return {field, unit, low, high, Rule::Absence::refused, 0.0};
 }
+constexpr Rule required(std::string_view field, std::string_view unit, pipeline::Bounds bounds) {
+  return required(field, unit, bounds.low, bounds.high);
+}
 constexpr Rule meant(std::string_view field, std::string_view unit, double low, double high) {
   return {field, unit, low, high, Rule::Absence::meant, 0.0};
+}
+constexpr Rule meant(std::string_view field, std::string_view unit, pipeline::Bounds bounds) {
+  return meant(field, unit, bounds.low, bounds.high);
 }
 constexpr Rule filled(std::string_view field, double standard, std::string_view unit, double low, double high) {
   return {field, unit, low, high, Rule::Absence::filled, standard};
@@ -33,18 +38,18 @@ constexpr Rule table[] = {
     filled("Site.declination_deg", 0, "deg", -180, 180),
     meant("Site.field_ut", "uT", 15, 75),
     meant("Site.dip_deg", "deg", -90, 90),
-    filled("Site.ground_up_m", 0, "m", -up_max_m, up_max_m),
-    required("Box.east_min_m", "m", -level_max_m, level_max_m),
-    required("Box.east_max_m", "m", -level_max_m, level_max_m),
-    required("Box.north_min_m", "m", -level_max_m, level_max_m),
-    required("Box.north_max_m", "m", -level_max_m, level_max_m),
-    required("Place.east_m", "m", -level_max_m, level_max_m),
-    required("Place.north_m", "m", -level_max_m, level_max_m),
+    filled("Site.ground_up_m", 0, "m", pipeline::up_bounds_m.low, pipeline::up_bounds_m.high),
+    required("Box.east_min_m", "m", pipeline::level_bounds_m),
+    required("Box.east_max_m", "m", pipeline::level_bounds_m),
+    required("Box.north_min_m", "m", pipeline::level_bounds_m),
+    required("Box.north_max_m", "m", pipeline::level_bounds_m),
+    required("Place.east_m", "m", pipeline::level_bounds_m),
+    required("Place.north_m", "m", pipeline::level_bounds_m),
 
     required("Anchor.anchor_id", "", 0, number_max),
-    required("Anchor.east_m", "m", -level_max_m, level_max_m),
-    required("Anchor.north_m", "m", -level_max_m, level_max_m),
-    required("Anchor.up_m", "m", -up_max_m, up_max_m),
+    required("Anchor.east_m", "m", pipeline::level_bounds_m),
+    required("Anchor.north_m", "m", pipeline::level_bounds_m),
+    required("Anchor.up_m", "m", pipeline::up_bounds_m),
     filled("Anchor.range_sigma_m", 0.12, "m", 0.001, 10),
     filled("Anchor.range_bias_m", 0, "m", -100, 100),
     filled("Anchor.range_scale", 0, "", -0.5, 0.5),
@@ -53,14 +58,14 @@ constexpr Rule table[] = {
     required("Tag.device_id", "", 1, number_max),
     filled("Tag.antenna_height_m", 0.5, "m", -100, 1000),
     filled("Tag.height_sigma_m", 0.1, "m", 0.001, 1000),
-    filled("Tag.range_lag_s", 0, "s", -2, 2),
+    filled("Tag.range_lag_s", 0, "s", 0, 2),
     meant("Tag.battery_low_v", "V", 0, 1000),
     meant("Tag.speed_max_mps", "m/s", 0.01, 1000),
-    required("Start.east_m", "m", -level_max_m, level_max_m),
-    required("Start.north_m", "m", -level_max_m, level_max_m),
-    required("Start.position_sigma_m", "m", 0.001, 10e3),
-    meant("Start.heading_deg", "deg", -360, 360),
-    meant("Start.heading_sigma_deg", "deg", 0.01, 180),
+    required("Start.east_m", "m", pipeline::level_bounds_m),
+    required("Start.north_m", "m", pipeline::level_bounds_m),
+    required("Start.position_sigma_m", "m", pipeline::position_sigma_bounds_m),
+    meant("Start.heading_deg", "deg", pipeline::heading_bounds_deg),
+    meant("Start.heading_sigma_deg", "deg", pipeline::heading_sigma_bounds_deg),
     filled("Mounting.roll_deg", 0, "deg", -360, 360),
     filled("Mounting.pitch_deg", 0, "deg", -360, 360),
     filled("Mounting.yaw_deg", 0, "deg", -360, 360),

@@ -8,7 +8,6 @@
 #include <asio/steady_timer.hpp>
 #include <asio/write.hpp>
 #include <chrono>
-#include <cmath>
 #include <cstddef>
 #include <optional>
 #include <set>
@@ -16,6 +15,7 @@
 
 #include "io/json_line.h"
 #include "io/listener.h"
+#include "pipeline/correction.h"
 
 namespace kedge::io {
 
@@ -25,34 +25,6 @@ constexpr std::size_t request_bytes_max = 4096;
 constexpr std::size_t connections_max = 8;
 // For a whole request, and for its answer to be taken.
 constexpr std::chrono::seconds patience{10};
-
-Status check_number(const char* field, bool present, double value, bool positive) {
-  if (!present) return {};
-  if (!std::isfinite(value)) return Error{fmt::format("{} is not a finite number", field)};
-  if (positive && value <= 0.0) return Error{fmt::format("{} {} is not above 0", field, value)};
-  return {};
-}
-
-Status check_correction(const station::v1::Correction& c) {
-  if (c.tag().empty()) return Error{"correction.tag is missing: it names the tag"};
-  for (const Status& status :
-       {check_number("correction.east_m", c.has_east_m(), c.east_m(), false),
-        check_number("correction.north_m", c.has_north_m(), c.north_m(), false),
-        check_number("correction.up_m", c.has_up_m(), c.up_m(), false),
-        check_number("correction.position_sigma_m", c.has_position_sigma_m(), c.position_sigma_m(), true),
-        check_number("correction.heading_deg", c.has_heading_deg(), c.heading_deg(), false),
-        check_number("correction.heading_sigma_deg", c.has_heading_sigma_deg(), c.heading_sigma_deg(), true)}) {
-    if (!status) return status;
-  }
-  if (c.has_east_m() != c.has_north_m()) return Error{"correction.east_m and north_m go together: give both or none"};
-  if (!c.has_east_m() && !c.has_heading_deg()) {
-    return Error{"the correction says nothing: give east_m and north_m, or heading_deg, or both"};
-  }
-  if (c.has_up_m() && !c.has_east_m()) return Error{"correction.up_m needs east_m and north_m beside it"};
-  if (c.has_position_sigma_m() && !c.has_east_m()) return Error{"correction.position_sigma_m needs a position"};
-  if (c.has_heading_sigma_deg() && !c.has_heading_deg()) return Error{"correction.heading_sigma_deg needs heading_deg"};
-  return {};
-}
 
 }  // namespace
 
@@ -68,7 +40,7 @@ Result<station::v1::Correction> parse_correction(std::string_view line) {
                     text.substr(0, text.find('\n')))};
   }
   if (!record.has_correction()) return Error{"only a \"correction\" is taken here"};
-  if (Status status = check_correction(record.correction()); !status) return Error{status.error()};
+  if (Status status = pipeline::check_correction(record.correction()); !status) return Error{status.error()};
   return std::move(*record.mutable_correction());
 }
 

@@ -18,8 +18,10 @@
 
 namespace kedge::io {
 
-/// Longest datagram that is taken, and longest piece of serial bytes handed over at once.
+/// Longest datagram that is handed over whole; of a longer one, as many bytes and one more are, so that it
+/// is refused where all bad input is: on record, counted, and with its reason.
 inline constexpr std::size_t datagram_bytes_max = 2048;
+/// Longest piece of serial bytes handed over at once.
 inline constexpr std::size_t serial_chunk_bytes_max = 1024;
 
 /// What links tell the runtime. Must outlive the links. `bytes` and `path` are valid during the call only.
@@ -39,14 +41,13 @@ class LinkEvents {
   virtual void state_changed(SourceId source, bool open, std::string_view reason) = 0;
 
   /// Input that arrived at the station and is lost: dropped by the kernel because the socket's buffer was
-  /// full (bytes unknown, 0), or longer than datagram_bytes_max. At most one call per reason and turn.
+  /// full (bytes unknown, 0). At most a few calls a turn.
   virtual void shed(SourceId source, std::uint64_t records, std::uint64_t bytes, std::string_view reason) = 0;
 };
 
 struct LinkCounters {
   std::uint64_t records = 0;  ///< datagrams or pieces handed over
   std::uint64_t bytes = 0;    ///< in them
-  std::uint64_t oversize = 0;
   std::uint64_t dropped_by_kernel = 0;
   std::uint64_t openings = 0;
 };

@@ -12,8 +12,9 @@
 #include <cerrno>
 #include <chrono>
 #include <cstring>
-#include <system_error>
 #include <utility>
+
+#include "io/system_text.h"
 
 namespace kedge::io {
 
@@ -24,8 +25,6 @@ using Acceptor = asio::basic_socket_acceptor<asio::generic::stream_protocol>;
 
 // After a failed accept (no descriptor free, say).
 constexpr std::chrono::milliseconds accept_pause{100};
-
-std::string system_text(int error) { return std::generic_category().message(error); }
 
 // Makes room at `path`: removes a socket that no one listens on.
 Status clear_stale(asio::io_context& context, const std::string& path) {

@@ -35,6 +35,11 @@ ClockReading read_clocks() {
   return best;
 }
 
+void ReceiveStamps::read(const ClockReading& now) {
+  if (std::abs(now.utc_minus_monotonic_ns() - now_.utc_minus_monotonic_ns()) > step_min_ns) stepped_ = true;
+  now_ = now;
+}
+
 bool utc_synchronised() {
   timex query{};
   const int state = ::adjtimex(&query);

@@ -2,7 +2,7 @@
 //
 // Records are ordered by CLOCK_MONOTONIC; UTC is shown by an offset from it, and a change of that
 // offset is a record. Kernel receive stamps are UTC and are turned to monotonic time at the moment
-// of reading, so a step of the UTC clock moves an arrival by at most the clamp below.
+// of reading.
 #pragma once
 
 #include <algorithm>
@@ -34,6 +34,31 @@ inline constexpr TimeNs kernel_wait_max_ns = ns_per_s;
 [[nodiscard]] constexpr TimeNs arrival_ns(const ClockReading& now, TimeNs stamp_utc_ns) {
   return now.monotonic_ns - std::clamp<TimeNs>(now.utc_ns - stamp_utc_ns, 0, kernel_wait_max_ns);
 }
+
+/// Turns the receive stamps of one socket into monotonic arrivals. A step of the UTC clock while datagrams
+/// wait in the kernel would make them look older than they are: from such a step on, until the socket is
+/// empty, they arrive when they are read.
+class ReceiveStamps {
+ public:
+  /// The clocks drift apart by less between two reads of a busy socket, and on a quiet one nothing waits.
+  static constexpr TimeNs step_min_ns = 5 * ns_per_ms;
+
+  /// `opened`: when the socket was.
+  explicit ReceiveStamps(const ClockReading& opened) : now_(opened) {}
+
+  /// The clocks right after a read.
+  void read(const ClockReading& now);
+  /// The socket held no more than was read.
+  void emptied() { stepped_ = false; }
+  /// Arrival of a datagram of the last read; without a stamp, that read.
+  [[nodiscard]] TimeNs arrival_ns(std::optional<TimeNs> stamp_utc_ns) const {
+    return stepped_ || !stamp_utc_ns ? now_.monotonic_ns : io::arrival_ns(now_, *stamp_utc_ns);
+  }
+
+ private:
+  ClockReading now_;
+  bool stepped_ = false;
+};
 
 /// Whether the operating system calls its clock synchronised (adjtimex; reads only).
 [[nodiscard]] bool utc_synchronised();

@@ -9,11 +9,11 @@
 #include <asio/steady_timer.hpp>
 #include <cerrno>
 #include <chrono>
-#include <system_error>
 #include <utility>
 
 #include "io/backoff.h"
 #include "io/monotonic.h"
+#include "io/system_text.h"
 #include "io/tty.h"
 
 namespace kedge::io {
@@ -107,7 +107,7 @@ class SerialLink::State : public std::enable_shared_from_this<State> {
       const ssize_t count = ::read(port_.native_handle(), chunk.data(), chunk.size());
       if (count < 0 && (errno == EAGAIN || errno == EINTR)) break;
       if (count <= 0) {
-        fail(count == 0 ? std::string("the device was unplugged or closed") : std::generic_category().message(errno));
+        fail(count == 0 ? std::string("the device was unplugged or closed") : system_text(errno));
         return;
       }
       // Only a port that delivers is well again: one that opens and fails at once keeps backing off.

@@ -10,12 +10,12 @@
 #include <asio/steady_timer.hpp>
 #include <cerrno>
 #include <cstring>
-#include <system_error>
 #include <utility>
 #include <vector>
 
 #include "io/backoff.h"
 #include "io/monotonic.h"
+#include "io/system_text.h"
 
 namespace kedge::io {
 
@@ -52,11 +52,10 @@ struct Batch {
       header.msg_control = controls[i].data();
       header.msg_controllen = controls[i].size();
     }
-    // MSG_TRUNC: the length of the whole datagram, also where it did not fit.
-    return ::recvmmsg(fd, messages.data(), batch_datagrams, MSG_DONTWAIT | MSG_TRUNC, nullptr);
+    return ::recvmmsg(fd, messages.data(), batch_datagrams, MSG_DONTWAIT, nullptr);
   }
 
-  std::array<std::array<std::byte, datagram_bytes_max>, batch_datagrams> bytes;
+  std::array<std::array<std::byte, datagram_bytes_max + 1>, batch_datagrams> bytes;
   std::array<sockaddr_storage, batch_datagrams> senders;
   struct alignas(cmsghdr) Control : std::array<std::byte, control_bytes> {};
   std::array<Control, batch_datagrams> controls;
@@ -197,6 +196,7 @@ class UdpLink::State : public std::enable_shared_from_this<State> {
   void opened() {
     ++counters_.openings;
     drops_seen_ = 0;
+    stamps_ = ReceiveStamps(read_clocks());
     events_.state_changed(options_.source, true, "");
     if (!closed_) wait_for_datagrams();
   }
@@ -220,41 +220,33 @@ class UdpLink::State : public std::enable_shared_from_this<State> {
   }
 
   void read_turn() {
-    std::uint64_t oversize = 0;
-    std::uint64_t oversize_bytes = 0;
     const std::uint64_t opening = opening_;
     for (int i = 0; i < batches_per_turn; ++i) {
       const int count = batch_->receive(socket_.native_handle());
       if (count < 0) {
         if (errno != EAGAIN && errno != EINTR) {
-          fail(std::generic_category().message(errno));
+          fail(system_text(errno));
           return;
         }
+        if (errno == EAGAIN) stamps_.emptied();
         break;
       }
-      const ClockReading now = read_clocks();
+      stamps_.read(read_clocks());
       for (std::size_t k = 0; k < static_cast<std::size_t>(count); ++k) {
         const Notes notes = read_notes(batch_->messages[k].msg_hdr);
         if (notes.drops) note_drops(*notes.drops);
         if (closed_) return;
         const std::size_t length = batch_->messages[k].msg_len;
-        if (length > datagram_bytes_max) {
-          ++oversize;
-          oversize_bytes += length;
-          continue;
-        }
         ++counters_.records;
         counters_.bytes += length;
-        events_.received(options_.source, arrival_ns(now, notes.stamp_utc_ns.value_or(now.utc_ns)),
+        events_.received(options_.source, stamps_.arrival_ns(notes.stamp_utc_ns),
                          std::span(batch_->bytes[k]).first(length), path_of(batch_->senders[k], notes, local_port_));
         if (closed_ || opening != opening_) return;
       }
-      if (static_cast<std::size_t>(count) < batch_datagrams) break;
-    }
-    if (oversize > 0) {
-      counters_.oversize += oversize;
-      events_.shed(options_.source, oversize, oversize_bytes,
-                   fmt::format("longer than the {} bytes a datagram may have", datagram_bytes_max));
+      if (static_cast<std::size_t>(count) < batch_datagrams) {
+        stamps_.emptied();
+        break;
+      }
     }
     if (!closed_) wait_for_datagrams();
   }
@@ -293,6 +285,7 @@ class UdpLink::State : public std::enable_shared_from_this<State> {
   Backoff backoff_;
   LinkCounters counters_;
   std::unique_ptr<Batch> batch_;
+  ReceiveStamps stamps_{ClockReading{}};
   std::uint64_t opening_ = 0;
   std::uint32_t drops_seen_ = 0;
   std::uint16_t local_port_ = 0;

@@ -20,8 +20,7 @@ Status check(const Number& number) {
   const auto& [field, present, value, bounds, unit] = number;
   if (!present || (value >= bounds.low && value <= bounds.high)) return {};
   const std::string wrong = std::isfinite(value) ? fmt::format("{}", value) : "not a finite number";
-  return Error{
-      fmt::format("correction.{} is {}; it must be {} to {} {}", field, wrong, bounds.low, bounds.high, unit)};
+  return Error{fmt::format("correction.{} is {}; it must be {} to {} {}", field, wrong, bounds.low, bounds.high, unit)};
 }
 
 }  // namespace

@@ -10,6 +10,7 @@
 
 #include "core/rotation.h"
 #include "pipeline/anchor_watch.h"
+#include "pipeline/correction.h"
 #include "pipeline/device_book.h"
 #include "pipeline/standing.h"
 #include "pipeline/station_watch.h"
@@ -326,6 +327,10 @@ class Engine::State : public wire::PacketSink {
     const auto tag = std::find_if(tags.begin(), tags.end(),
                                   [&](const TagSettings& candidate) { return candidate.model.name == word.tag(); });
     if (tag == tags.end()) return tell(VerdictCode::unknown_device, 0, "a correction for a tag that is not configured");
+    if (const Status good = check_correction(word); !good) {
+      station_.refused();
+      return tell(VerdictCode::implausible, 0, good.error());
+    }
     fusion::CorrectionMeasurement measurement;
     if (word.has_east_m() && word.has_north_m()) measurement.position_m = Vector2(word.east_m(), word.north_m());
     if (word.has_up_m()) measurement.up_m = word.up_m();

@@ -58,10 +58,10 @@ class StationWatch {
 
   template <class Archive>
   void fields(Archive& archive) {
-    for (std::size_t i = 0; i < open_.size(); ++i) {
-      bool open = open_[i];
+    for (auto&& link_open : open_) {
+      bool open = link_open;
       archive(open);
-      open_[i] = open;
+      link_open = open;
     }
     archive(concerns_, shed_, capture_gaps_, capture_lost_, records_, packets_, refused_, synchronised_);
   }

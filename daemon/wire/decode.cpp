@@ -218,8 +218,9 @@ void Decoder::decode(std::span<const std::byte> datagram, PacketSink& sink) {
     sink.refused({.device_id = device_id, .code = objection.code, .text = objection.text});
   };
   if (datagram.size() > datagram_bytes_max) {
+    // A link cuts what is longer, so its length is not known here.
     return refuse(
-        0, *malformed(fmt::format("datagram of {} bytes: at most {} are taken", datagram.size(), datagram_bytes_max)));
+        0, *malformed(fmt::format("datagram is longer than {} bytes; send fewer packets in each", datagram_bytes_max)));
   }
   constexpr auto packets_tag =
       WireFormatLite::MakeTag(packets::v1::Datagram::kPacketsFieldNumber, WireFormatLite::WIRETYPE_LENGTH_DELIMITED);

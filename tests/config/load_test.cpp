@@ -140,6 +140,20 @@ TEST_CASE("fields must fit each other") {
                "t:6:46: tags[b].magnetometer.soft_iron has the determinant 0; below 0.001 it loses a direction"});
 }
 
+TEST_CASE("a range lag is no longer than the time that ranges are waited for") {
+  const auto with_lag = [](const std::string& lag_s, const std::string& limits = "") {
+    return errors_with(fmt::format("tags {{ name: \"a\" device_id: 1 range_lag_s: {} }} {}", lag_s, limits));
+  };
+  const std::string late = ", so every range would come too late to be used";
+  CHECK(with_lag("1.5") ==
+        Errors{"t:5:31: tags[a].range_lag_s does not fit: range_lag_s 1.5 s is above limits.delay_max_s 1 s" + late});
+  CHECK(with_lag("0.5", "limits { delay_max_s: 0.4 }") ==
+        Errors{"t:5:31: tags[a].range_lag_s does not fit: range_lag_s 0.5 s is above limits.delay_max_s 0.4 s" + late});
+  CHECK(with_lag("1.5", "limits { delay_max_s: 2 }") == Errors{});
+  CHECK(with_lag("1") == Errors{});
+  CHECK(with_lag("-0.01") == Errors{"t:5:31: tags[a].range_lag_s is -0.01; it must be 0 to 2 s"});
+}
+
 TEST_CASE("addresses are numbers with a port, and remote ones must be meant") {
   const std::string rule =
       "; it must be an address in numbers and a port of 1 to 65535, such as 127.0.0.1:47810 or [::1]:47810";

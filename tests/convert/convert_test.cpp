@@ -3,10 +3,8 @@
 #include <unistd.h>
 #include <zlib.h>
 
-#include <array>
 #include <catch2/catch.hpp>
 #include <cmath>
-#include <cstdio>
 #include <cstdlib>
 #include <filesystem>
 #include <fstream>
@@ -16,6 +14,7 @@
 #include "capture/file_source.h"
 #include "proto/station.pb.h"
 #include "scoring/csv.h"
+#include "support/program.h"
 
 using namespace kedge;
 using scoring::CsvTable;
@@ -52,24 +51,9 @@ class Folder {
   fs::path path_;
 };
 
-struct Run {
-  int exit_code = 0;
-  std::string output;  ///< both streams
-};
+using test::Run;
 
-Run convert(const std::string& arguments) {
-  const std::string command = KEDGE_BINARY_DIR "/tools/kedge-convert " + arguments + " 2>&1";
-  std::FILE* pipe = ::popen(command.c_str(), "r");
-  REQUIRE(pipe != nullptr);
-  Run run;
-  std::array<char, 4096> piece{};
-  for (std::size_t got = 0; (got = std::fread(piece.data(), 1, piece.size(), pipe)) > 0;)
-    run.output.append(piece.data(), got);
-  const int status = ::pclose(pipe);
-  REQUIRE(WIFEXITED(status));
-  run.exit_code = WEXITSTATUS(status);
-  return run;
-}
+Run convert(const std::string& arguments) { return test::run_program("tools/kedge-convert", arguments); }
 
 std::string read_text(const fs::path& path) {
   std::ifstream file(path, std::ios::binary);
@@ -172,7 +156,13 @@ TEST_CASE("the capture has a station's own records, in order, and packets at the
   const Folder folder;
   folder.file("logs/anchors.csv", anchors_csv);
   folder.file("logs/ranges.csv", "t_s,tag,anchor,range_m\n0.2,1,4,3\n-0.05,1,4,2\n");
-  REQUIRE(convert((folder / "logs").string() + " " + (folder / "c.pcapng").string()).exit_code == 0);
+  const Run run = convert((folder / "logs").string() + " " + (folder / "c.pcapng").string());
+  REQUIRE(run.exit_code == 0);
+  // A station refuses what is before its own beginning.
+  CHECK(
+      run.output ==
+      "2 packets of 1 tags\ntimes of the logs begin below 0, those of a station never do: 1 s was added to all; truth "
+      "with the times of the logs needs kedge-evaluate --truth-offset 1\n");
   capture::FileSource source;
   REQUIRE(source.open(folder / "c.pcapng"));
   auto reader = capture::CaptureReader::open(source);
@@ -189,20 +179,21 @@ TEST_CASE("the capture has a station's own records, in order, and packets at the
     }
     seen.push_back(fmt::format("{} {} {}", record.time_ns, record.sequence, what));
   }
-  CHECK(seen == std::vector<std::string>{"-50000000 0 utc", "-50000000 1 link", "-50000000 0 packet", "0 2 tick",
-                                         "100000000 3 tick", "200000000 4 tick", "200000000 1 packet",
-                                         "300000000 5 tick"});
+  CHECK(seen == std::vector<std::string>{"950000000 0 utc", "950000000 1 link", "950000000 0 packet",
+                                         "1000000000 2 tick", "1100000000 3 tick", "1200000000 4 tick",
+                                         "1200000000 1 packet", "1300000000 5 tick"});
 }
 
 TEST_CASE("options go into the configuration") {
   const Folder folder;
   folder.file("logs/anchors.csv", anchors_csv);
   folder.file("logs/ranges.csv", ranges_csv);
-  const Run run = convert(
-      (folder / "logs").string() + " " + (folder / "c.pcapng").string() + " --config " + (folder / "c.txtpb").string() +
-      " --profile flyer --method plain --anchors 4 --tags 1 --mounting-roll 180 --mounting-pitch=-8.5"
-      " --mounting-yaw 0.5 --antenna=-0.064,-0.081,0.101 --height 1.5 --start 1,2,0.5,90,5"
-      " --range-lag 0.1 --range-sigma 0.2");
+  const Run run =
+      convert((folder / "logs").string() + " " + (folder / "c.pcapng").string() + " --config-out " +
+              (folder / "c.txtpb").string() +
+              " --profile flyer --method plain --anchors 4 --tags 1 --mounting-roll 180 --mounting-pitch=-8.5"
+              " --mounting-yaw 0.5 --antenna=-0.064,-0.081,0.101 --height 1.5 --start 1,2,0.5,90,5"
+              " --range-lag 0.1 --range-sigma 0.2");
   CHECK(run.output == "1 packets of 1 tags\n");
   REQUIRE(run.exit_code == 0);
   const std::string text = read_text(folder / "c.txtpb");
@@ -251,7 +242,7 @@ TEST_CASE("bad logs and command lines are refused with place and remedy") {
   CHECK(refusal("ranges.csv", "t_s,tag,anchor,range_m\n0,1,4,2\n1,1,4,near\n") ==
         "kedge-convert: logs/ranges.csv:3: column 'range_m' holds 'near' where a finite number is wanted\n");
   CHECK(refusal("ranges.csv", "t_s,tag,anchor,range_m\n0,1,4,2\n1e12,1,4,2\n") ==
-        "kedge-convert: logs/ranges.csv:3: column 't_s' holds 1e+12 s; times must be within +-9e+09 s\n");
+        "kedge-convert: logs/ranges.csv:3: column 't_s' holds 1e+12 s; times must be within +-4e+09 s\n");
   CHECK(
       refusal("ranges.csv", "t_s,tag,anchor,range_m\n0,1,4,2\n100000,1,4,2\n") ==
       "kedge-convert: logs/ranges.csv:3: column 't_s' is 100000 s after the row before it (logs/ranges.csv:2); at most "
@@ -315,6 +306,15 @@ TEST_CASE("nothing is overwritten") {
   CHECK(read_text(folder / "c.pcapng") == "precious");
 
   fs::remove(folder / "c.pcapng");
+  folder.file("c.txtpb", "precious");
+  run = convert((folder / "logs").string() + " " + (folder / "c.pcapng").string() + " --config-out " +
+                (folder / "c.txtpb").string());
+  CHECK(run.exit_code == 1);
+  CHECK(folder.without_path(run.output) ==
+        "kedge-convert: c.txtpb exists: it is never overwritten; give another name or remove it\n");
+  CHECK(read_text(folder / "c.txtpb") == "precious");
+  CHECK_FALSE(fs::exists(folder / "c.pcapng"));
+
   REQUIRE(convert((folder / "logs").string() + " " + (folder / "c.pcapng").string()).exit_code == 0);
   run = convert((folder / "c.pcapng").string() + " " + (folder / "logs").string());
   CHECK(run.exit_code == 1);

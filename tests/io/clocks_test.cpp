@@ -21,6 +21,37 @@ TEST_CASE("a kernel stamp becomes monotonic time, its age clamped to 0 to 1 s") 
   CHECK(io::arrival_ns(now, now.utc_ns - 3600 * ns_per_s) == 49 * ns_per_s);
 }
 
+TEST_CASE("a datagram that waits while UTC is set is not stamped early") {
+  const TimeNs utc_ns = 1'700'000'000 * ns_per_s;
+  const auto at = [](TimeNs monotonic_ns, TimeNs utc_minus_monotonic_ns) {
+    return io::ClockReading{monotonic_ns, monotonic_ns + utc_minus_monotonic_ns};
+  };
+  io::ReceiveStamps stamps(at(50 * ns_per_s, utc_ns));
+  stamps.read(at(51 * ns_per_s, utc_ns));
+  CHECK(stamps.arrival_ns(51 * ns_per_s + utc_ns - 3 * ns_per_ms) == 51 * ns_per_s - 3 * ns_per_ms);
+  CHECK(stamps.arrival_ns(std::nullopt) == 51 * ns_per_s);
+  stamps.emptied();
+
+  // UTC goes forward by 0.3 s between the stamp and the reading.
+  const TimeNs later_ns = utc_ns + 300 * ns_per_ms;
+  stamps.read(at(52 * ns_per_s, later_ns));
+  CHECK(stamps.arrival_ns(52 * ns_per_s + utc_ns - 2 * ns_per_ms) == 52 * ns_per_s);
+  // The same for what did not fit in that read.
+  stamps.read(at(52 * ns_per_s + ns_per_ms, later_ns));
+  CHECK(stamps.arrival_ns(52 * ns_per_s + utc_ns - 2 * ns_per_ms) == 52 * ns_per_s + ns_per_ms);
+  stamps.emptied();
+  stamps.read(at(53 * ns_per_s, later_ns));
+  CHECK(stamps.arrival_ns(53 * ns_per_s + later_ns - 4 * ns_per_ms) == 53 * ns_per_s - 4 * ns_per_ms);
+  stamps.emptied();
+
+  // Slewing is no step: 5 ms and no more.
+  stamps.read(at(54 * ns_per_s, later_ns + 5 * ns_per_ms));
+  CHECK(stamps.arrival_ns(54 * ns_per_s + later_ns) == 54 * ns_per_s - 5 * ns_per_ms);
+  stamps.emptied();
+  stamps.read(at(55 * ns_per_s, later_ns - ns_per_ms));
+  CHECK(stamps.arrival_ns(55 * ns_per_s + later_ns - 20 * ns_per_ms) == 55 * ns_per_s);
+}
+
 TEST_CASE("both clocks are the system's, read at one instant") {
   timespec mono{};
   timespec utc{};

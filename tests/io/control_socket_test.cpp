@@ -1,12 +1,15 @@
 // The operator's socket with real clients, and the sockets' files.
+#include <google/protobuf/util/json_util.h>
 #include <sys/stat.h>
 
 #include <algorithm>
 #include <catch2/catch.hpp>
+#include <cmath>
 #include <filesystem>
 #include <fstream>
 #include <vector>
 
+#include "config/rules.h"
 #include "io/control_socket.h"
 #include "io/json_line.h"
 #include "io/listener.h"
@@ -49,13 +52,14 @@ TEST_CASE("a correction that says nothing, half or nonsense is refused with the 
         "correction.east_m and north_m go together: give both or none");
   CHECK(why(R"({"correction":{"tag":"a","north_m":1,"heading_deg":3}})") ==
         "correction.east_m and north_m go together: give both or none");
-  CHECK(why(R"({"correction":{"tag":"a","east_m":"NaN","north_m":1}})") == "correction.east_m is not a finite number");
+  CHECK(why(R"({"correction":{"tag":"a","east_m":"NaN","north_m":1}})") ==
+        "correction.east_m is not a finite number; it must be -100000 to 100000 m");
   CHECK(why(R"({"correction":{"tag":"a","heading_deg":"Infinity"}})") ==
-        "correction.heading_deg is not a finite number");
+        "correction.heading_deg is not a finite number; it must be -360 to 360 deg");
   CHECK(why(R"({"correction":{"tag":"a","east_m":1,"north_m":1,"position_sigma_m":0}})") ==
-        "correction.position_sigma_m 0 is not above 0");
+        "correction.position_sigma_m is 0; it must be 0.001 to 10000 m");
   CHECK(why(R"({"correction":{"tag":"a","heading_deg":1,"heading_sigma_deg":-2}})") ==
-        "correction.heading_sigma_deg -2 is not above 0");
+        "correction.heading_sigma_deg is -2; it must be 0.01 to 180 deg");
   CHECK(why(R"({"correction":{"tag":"a","heading_deg":1,"up_m":2}})") ==
         "correction.up_m needs east_m and north_m beside it");
   CHECK(why(R"({"correction":{"tag":"a","heading_deg":1,"position_sigma_m":2}})") ==
@@ -75,6 +79,44 @@ TEST_CASE("a correction that says nothing, half or nonsense is refused with the 
     CHECK(error.find('\n') == std::string::npos);
   }
   CHECK(why(std::string(3000, '[')).starts_with("this is no request: "));
+}
+
+TEST_CASE("a correction keeps to the bounds of the configuration") {
+  const auto answer = [](const char* field, double value) {
+    station::v1::StationRecord record;
+    station::v1::Correction& correction = *record.mutable_correction();
+    correction.set_tag("a");
+    correction.set_east_m(1);
+    correction.set_north_m(1);
+    correction.set_heading_deg(1);
+    correction.GetReflection()->SetDouble(&correction, correction.GetDescriptor()->FindFieldByName(field), value);
+    std::string line;
+    REQUIRE(google::protobuf::util::MessageToJsonString(record, &line).ok());
+    return why(line);
+  };
+  struct Case {
+    const char* field;
+    const char* rule;
+  };
+  const std::vector<Case> cases = {{"east_m", "Start.east_m"},
+                                   {"north_m", "Start.north_m"},
+                                   {"up_m", "Anchor.up_m"},
+                                   {"position_sigma_m", "Start.position_sigma_m"},
+                                   {"heading_deg", "Start.heading_deg"},
+                                   {"heading_sigma_deg", "Start.heading_sigma_deg"}};
+  for (const auto& [field, name] : cases) {
+    CAPTURE(field);
+    const auto rules = config::rules();
+    const auto rule =
+        std::find_if(rules.begin(), rules.end(), [&](const config::Rule& one) { return one.field == name; });
+    REQUIRE(rule != rules.end());
+    const std::string range = fmt::format("; it must be {} to {} {}", rule->low, rule->high, rule->unit);
+    CHECK(answer(field, rule->low) == "accepted");
+    CHECK(answer(field, rule->high) == "accepted");
+    const double below = std::nextafter(rule->low, -1e9);
+    CHECK(answer(field, below) == fmt::format("correction.{} is {}{}", field, below, range));
+    CHECK(answer(field, 1e300) == fmt::format("correction.{} is 1e+300{}", field, range));
+  }
 }
 
 TEST_CASE("an answer's text is JSON whatever it holds") {

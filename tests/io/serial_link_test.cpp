@@ -181,3 +181,38 @@ TEST_CASE("a device that is missing or is none is no failure of the station") {
   test::run_for(context, 20ms);
   CHECK(events.text().empty());
 }
+
+TEST_CASE("a serial port has one reader, and a second is told why not") {
+  asio::io_context context;
+  test::LinkEventLog events;
+  const Cable cable;
+  const auto first = io::open_tty(cable.path(), 115200);
+  REQUIRE(first.ok());
+  const auto second = io::open_tty(cable.path(), 57600);
+  REQUIRE_FALSE(second.ok());
+  CHECK(second.error() == "another program holds it; stop that program or choose another port");
+  // Nor did the attempt change the first one's line.
+  CHECK(cable.baud() == 115200);
+
+  // A link waits for it as for a missing device.
+  io::SerialLink link(context, {.source = 2, .name = "mast", .device = cable.path()}, events);
+  REQUIRE(link.open().ok());
+  CHECK(events.states.back().reason ==
+        cable.path() + ": another program holds it; stop that program or choose another port");
+  ::close(*first);
+  REQUIRE(test::run_until(context, [&] { return events.states.back().open; }));
+}
+
+TEST_CASE("a pseudo-terminal whose reader died can be opened by any user again") {
+  const Cable cable;
+  const auto first = io::open_tty(cable.path(), 115200);
+  REQUIRE(first.ok());
+  ::close(*first);
+  const auto second = io::open_tty(cable.path(), 115200);
+  REQUIRE(second.ok());
+  // The exclusive mode binds all but root, and would still be there.
+  int exclusive = 1;
+  REQUIRE(::ioctl(*second, TIOCGEXCL, &exclusive) == 0);
+  CHECK(exclusive == 0);
+  ::close(*second);
+}

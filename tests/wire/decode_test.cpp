@@ -302,7 +302,7 @@ TEST_CASE("sizes are bounded") {
   Heard heard;
   decode(std::vector<std::byte>(datagram_bytes_max + 1), heard);
   REQUIRE(heard.order == "r");
-  CHECK(heard.refusals[0].text == "datagram of 2049 bytes: at most 2048 are taken");
+  CHECK(heard.refusals[0].text == "datagram is longer than 2048 bytes; send fewer packets in each");
 
   packets::v1::Datagram many;
   for (int i = 0; i < 70; ++i) *many.add_packets() = range(1.0F);

@@ -7,8 +7,8 @@
 namespace kedge::convert {
 
 namespace {
-// Some 285 years: what nanoseconds in 64 bits can hold.
-constexpr double time_s_max = 9e9;
+// Some 127 years: nanoseconds in 64 bits hold the difference of any two.
+constexpr double time_s_max = 4e9;
 }  // namespace
 
 void Columns::fail(std::string text) {

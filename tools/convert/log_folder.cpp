@@ -56,6 +56,7 @@ Result<LogFolder> LogFolder::read(const std::filesystem::path& path, const Optio
     return std::tie(a.time_ns, a.kind) < std::tie(b.time_ns, b.kind);
   });
   if (Status status = folder.check_gaps(); !status) return Error{status.error()};
+  folder.begin_at_zero_or_later();
   return folder;
 }
 
@@ -105,6 +106,13 @@ Status LogFolder::check_gaps() const {
                     place(events_[i]), seconds(gap_ns), place(events_[i - 1]), gap_max_ns / ns_per_s)};
   }
   return {};
+}
+
+void LogFolder::begin_at_zero_or_later() {
+  // Whole seconds, so that the times still read alike.
+  const TimeNs first_ns = events_.front().time_ns;
+  if (first_ns < 0) shift_s_ = (ns_per_s - 1 - first_ns) / ns_per_s;
+  for (LogEvent& event : events_) event.time_ns += shift_s_ * ns_per_s;
 }
 
 Status LogFolder::add_ranges() {

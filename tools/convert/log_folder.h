@@ -34,8 +34,11 @@ class LogFolder {
 
   [[nodiscard]] const std::vector<AnchorRow>& anchors() const { return anchors_; }
   [[nodiscard]] const std::vector<LogTag>& tags() const { return tags_; }
-  /// By time; not empty. At equal times inertial before travel before range, then in the order of the file.
+  /// By time, none before 0; not empty. At equal times inertial before travel before range, then in the order
+  /// of the file.
   [[nodiscard]] const std::vector<LogEvent>& events() const { return events_; }
+  /// What was added to all times of the logs, because a station's clock is never below 0.
+  [[nodiscard]] std::int64_t shift_s() const { return shift_s_; }
   /// The packet's body; device, number and time are left to the caller.
   [[nodiscard]] packets::v1::Packet packet(const LogEvent& event) const;
   /// "FILE:LINE" of an event.
@@ -47,6 +50,7 @@ class LogFolder {
   Status select_anchors(const std::vector<std::uint32_t>& wanted);
   Status select_tags(const TagList& list, const std::vector<std::string>& wanted);
   Status check_gaps() const;
+  void begin_at_zero_or_later();
   Status add_ranges();
   void add_events(const LogTable& log, LogEvent::Kind kind);
 
@@ -57,6 +61,7 @@ class LogFolder {
   std::optional<InertialLog> inertial_;
   std::optional<TravelLog> travel_;
   std::vector<LogEvent> events_;
+  std::int64_t shift_s_ = 0;
 };
 
 }  // namespace kedge::convert

@@ -16,6 +16,7 @@
 #include "convert/options.h"
 #include "convert/to_capture.h"
 #include "core/build_info.h"
+#include "recording/new_file.h"
 
 namespace {
 
@@ -30,26 +31,26 @@ int fail(int code, const std::string& text) {
   return code;
 }
 
-Status write_configuration(const config::v1::Configuration& configuration, const std::string& path) {
-  if (path.empty()) return {};
-  std::ofstream out(path, std::ios::binary);
-  out << config::print(configuration);
-  out.close();
-  if (out.fail()) return Error{fmt::format("--config {}: could not be written", path)};
-  return {};
-}
-
 int from_logs(const Options& options) {
   const auto folder = convert::LogFolder::read(options.from, options);
   if (!folder) return fail(exit_usage, folder.error());
   const auto configuration = convert::configuration_for(*folder, options);
   if (!configuration) return fail(exit_usage, configuration.error());
+  const std::string& config_out = options.config_out;
+  if (const Status status = recording::check_new(config_out); !status) return fail(exit_failure, status.error());
   const auto done = convert::write_capture(*folder, *configuration, options.to);
   if (!done) return fail(exit_failure, done.error());
-  if (const Status status = write_configuration(*configuration, options.config_out); !status) {
-    return fail(exit_failure, status.error());
+  if (!config_out.empty()) {
+    const Status written = recording::write_new(config_out, config::print(*configuration));
+    if (!written) return fail(exit_failure, written.error());
   }
   fmt::print(stderr, "{} packets of {} tags\n", done->packets, folder->tags().size());
+  if (const std::int64_t shift_s = folder->shift_s(); shift_s != 0) {
+    fmt::print(stderr,
+               "times of the logs begin below 0, those of a station never do: {0} s was added to all; truth with the "
+               "times of the logs needs kedge-evaluate --truth-offset {0}\n",
+               shift_s);
+  }
   if (done->refused > 0) {
     fmt::print(stderr, "{} of them a station refuses, the first: {}\n", done->refused, done->first_refusal);
   }
@@ -121,7 +122,8 @@ void add_options(CLI::App& app, Options& options) {
       ->required();
   app.add_option("TO", options.to, "The capture to write (from logs), or the folder for the tables; never overwritten")
       ->required();
-  app.add_option("--config", options.config_out, "Also write the configuration that fits the logs to this file");
+  app.add_option("--config-out", options.config_out,
+                 "Also write the configuration that fits the logs to this file; never overwritten");
   app.add_option("--profile", options.profile, "How the tags move")
       ->check(CLI::IsMember({"wheeled", "walker", "flyer", "free"}));
   app.add_option("--method", options.method, "Method of fusion")

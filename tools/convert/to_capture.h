@@ -17,8 +17,8 @@ struct ToCapture {
   std::string first_refusal;  ///< "FILE:LINE: why"
 };
 
-/// Writes a new file. A packet arrives at the time of its row, so that message times compare with the
-/// logs' own; device time is the same in microseconds, counted from 1000 s before the first row or more.
+/// Writes a new file. A packet arrives at the time of its event, so that message times compare with the
+/// logs' own (but for LogFolder::shift_s); device time is 1000 s more, in microseconds.
 /// Times from 10^9 s on are taken as UTC, others begin on 2026-01-01.
 [[nodiscard]] Result<ToCapture> write_capture(const LogFolder& folder, const config::v1::Configuration& configuration,
                                               const std::string& path);

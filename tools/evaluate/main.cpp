@@ -3,6 +3,7 @@
 #include <CLI/CLI.hpp>
 
 #include <cstdio>
+#include <exception>
 #include <optional>
 #include <string>
 #include <vector>
@@ -18,6 +19,7 @@ using kedge::scoring::Collector;
 using kedge::scoring::Sample;
 using kedge::scoring::TruthFile;
 
+constexpr int exit_failure = 1;
 constexpr int exit_usage = 2;
 
 struct Options {
@@ -99,5 +101,10 @@ int main(int argc, char** argv) {
   } catch (const CLI::ParseError& error) {
     return app.exit(error) == 0 ? 0 : exit_usage;
   }
-  return evaluate(options);
+  try {
+    return evaluate(options);
+  } catch (const std::exception& failure) {
+    fmt::print(stderr, "kedge-evaluate: {}\n", failure.what());
+    return exit_failure;
+  }
 }

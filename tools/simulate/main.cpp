@@ -3,10 +3,11 @@
 #include <CLI/CLI.hpp>
 
 #include <cstdio>
-#include <fstream>
+#include <exception>
 
 #include "config/print.h"
 #include "core/build_info.h"
+#include "recording/new_file.h"
 #include "simulate/live.h"
 #include "simulate/plan.h"
 #include "simulate/to_capture.h"
@@ -39,8 +40,8 @@ void add_options(CLI::App& app, Options& options) {
   app.add_option("--serial-tag", options.serial_tag, "The tag on the serial line, where there are several");
   auto* capture = app.add_option("--capture", options.capture, "Write this capture instead of sending (.pcapng)");
   capture->excludes(udp);
-  app.add_option("--truth", options.truth, "Write where the tags really are (.csv)");
-  app.add_option("--config-out", options.config_out, "Write a configuration to match (.txtpb)");
+  app.add_option("--truth", options.truth, "Write where the tags really are (.csv); never overwritten");
+  app.add_option("--config-out", options.config_out, "Write a configuration to match (.txtpb); never overwritten");
 
   const CLI::Range share(0.0, 1.0);
   app.add_flag("--ideal", options.ideal, "No faults but those asked for");
@@ -57,18 +58,27 @@ void add_options(CLI::App& app, Options& options) {
       ->check(CLI::Range(0.0, 4294.0));
 }
 
+kedge::Status write_configuration(const Options& options, const Plan& plan) {
+  if (options.config_out.empty()) return {};
+  return kedge::recording::write_new(options.config_out, kedge::config::print(plan.configuration));
+}
+
+kedge::Status run(const Options& options, Plan& plan) {
+  if (kedge::Status fresh = kedge::recording::check_new(options.config_out); !fresh) return fresh;
+  if (!options.live()) {
+    if (kedge::Status written = kedge::simulate::write_capture(options, plan); !written) return written;
+    return write_configuration(options, plan);
+  }
+  // The station that is to hear the tags needs it while they send.
+  if (kedge::Status written = write_configuration(options, plan); !written) return written;
+  return kedge::simulate::run_live(options, plan);
+}
+
 int simulate(const Options& options) {
   auto plan = kedge::simulate::make_plan(options);
   if (!plan) return fail(exit_usage, plan.error());
-  if (!options.config_out.empty()) {
-    std::ofstream out(options.config_out, std::ios::trunc);
-    out << kedge::config::print(plan->configuration);
-    out.close();
-    if (!out) return fail(exit_failure, fmt::format("{}: cannot be written; is the folder there?", options.config_out));
-  }
-  const kedge::Status run =
-      options.live() ? kedge::simulate::run_live(options, *plan) : kedge::simulate::write_capture(options, *plan);
-  return run ? 0 : fail(exit_failure, run.error());
+  const kedge::Status done = run(options, *plan);
+  return done ? 0 : fail(exit_failure, done.error());
 }
 
 }  // namespace
@@ -83,5 +93,9 @@ int main(int argc, char** argv) {
   } catch (const CLI::ParseError& error) {
     return app.exit(error) == 0 ? 0 : exit_usage;
   }
-  return simulate(options);
+  try {
+    return simulate(options);
+  } catch (const std::exception& failure) {
+    return fail(exit_failure, failure.what());
+  }
 }

@@ -4,6 +4,8 @@
 
 #include <algorithm>
 
+#include "recording/new_file.h"
+
 namespace kedge::simulate {
 
 namespace {
@@ -21,6 +23,7 @@ TruthWriter::TruthWriter(const std::vector<simulation::ScenarioSpec>& specs)
 
 Status TruthWriter::open(const std::string& path) {
   if (path.empty()) return {};
+  if (Status fresh = recording::check_new(path); !fresh) return fresh;
   path_ = path;
   out_.open(path, std::ios::trunc);
   if (!out_) return Error{fmt::format("{}: cannot be written; is the folder there?", path)};

@@ -16,7 +16,7 @@ class TruthWriter {
  public:
   explicit TruthWriter(const std::vector<simulation::ScenarioSpec>& specs);
 
-  /// An empty path: nothing is written.
+  /// Makes the file; an existing one is refused. An empty path: nothing is written.
   [[nodiscard]] Status open(const std::string& path);
   /// Writes all rows up to that time.
   void advance(TimeNs now_ns);
