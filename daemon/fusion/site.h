@@ -41,7 +41,7 @@ struct Site {
 };
 
 enum class Profile : std::uint8_t { wheeled, walker, flyer, free };
-enum class Method : std::uint8_t { speed_aided, plain };
+enum class Method : std::uint8_t { mixture, speed_aided, plain };
 
 struct Start {
   Vector2 position_m = Vector2::Zero();

@@ -1,0 +1,272 @@
+#include <algorithm>
+#include <array>
+#include <cmath>
+#include <numbers>
+
+#include "fusion/standard_tracker.h"
+
+namespace kedge::fusion {
+
+namespace {
+
+/// Across the line of sight a seed is so wide that the circle bends away by this much from a straight line.
+constexpr double seed_bend_m = 0.05;
+constexpr double seed_along_sigma_m = 0.5;
+constexpr int seeds_min = 24;
+constexpr int seeds_max = 72;
+constexpr double tilt_sigma_calm_rad = radians(0.15);
+constexpr double level_lag_s = 0.7;
+constexpr double tilt_sigma_moving_rad = radians(2.0);
+constexpr double heading_start_sigma_rad = radians(1.0);
+constexpr double dip_typical_rad = radians(60.0);
+constexpr double gyro_bias_sigma_min_radps = 5e-5;
+/// Speeds of the bank when the tag is in motion already: forward for what points where it goes.
+constexpr int bank_bearings = 72;
+constexpr int bank_speeds = 7;
+/// Velocities of what does not: directions times speeds, and none.
+constexpr int free_bearings = 36;
+constexpr int free_directions = 8;
+constexpr int free_speeds = 3;
+constexpr double free_speed_max_mps = 6.0;
+/// A seed is worth having above this share of the best.
+constexpr double seed_share_min = 1e-3;
+/// Room that the bank leaves for what is there already.
+constexpr std::size_t keep_max = 8;
+constexpr double mirror_weight = 0.002;
+/// A component under which the circle bends by more than this is split.
+constexpr double split_bend_m = 0.07;
+constexpr std::size_t split_max = 48;
+constexpr double range_min_m = 0.5;
+
+struct Candidate {
+  double bearing_rad = 0.0;
+  Vector2 velocity_mps = Vector2::Zero();
+  double weight = 0.0;
+};
+
+double square(double value) { return value * value; }
+
+}  // namespace
+
+Component StandardTracker::waking_component() const {
+  const AttitudeFilter& attitude = state_.attitude;
+  Component component;
+  component.weight = 1.0;
+  FullFilter& filter = component.filter;
+  filter.reset(model_);
+  filter.q_body_to_site = attitude.q_body_to_site;
+  filter.biases.head<3>() = attitude.gyro_bias_radps;
+  filter.P.diagonal().segment<3>(in::gyro).setConstant(
+      std::max(attitude.gyro_bias_variance, square(gyro_bias_sigma_min_radps)));
+  // Level from gravity: what the accelerometer reads too much, the attitude leans (eq. 56).
+  FullMatrix common = FullMatrix::Identity();
+  filter.P.block<3, 3>(in::rotation, in::rotation).setZero();
+  // Averaging gravity lags behind what the bias turns.
+  const double lag_sigma = std::sqrt(attitude.gyro_bias_variance) * level_lag_s;
+  const double tilt_sigma = state_.calm ? std::hypot(tilt_sigma_calm_rad, lag_sigma) : tilt_sigma_moving_rad;
+  filter.P.diagonal().segment<2>(in::rotation).setConstant(square(tilt_sigma));
+  common.block<3, 3>(in::rotation, in::accel) =
+      skew(Vector3::UnitZ()) * filter.q_body_to_site.toRotationMatrix() / site_.gravity_mps2;
+  common.row(in::heading).setZero();
+  common(in::heading, in::heading) = 1.0;
+  filter.P = (common * filter.P * common.transpose()).eval();
+  filter.P(in::heading, in::heading) = square(1.8);
+  if (attitude.aligned && tag_.magnetometer) {
+    // The heading is the field's, so that it errs as the field does (eq. 57).
+    const double dip = site_.dip_rad.value_or(dip_typical_rad);
+    const double north = site_.magnetic_north_heading_rad;
+    const Vector3 field(std::cos(dip) * std::cos(north), std::cos(dip) * std::sin(north), -std::sin(dip));
+    filter.update(filter.field(filter.q_body_to_site.conjugate() * field, north, heading_start_sigma_rad));
+  }
+  if (state_.told_heading_rad) {
+    const double innovation = wrap_angle(*state_.told_heading_rad - filter.heading_rad());
+    filter.update(FullFilter::direct(in::heading, innovation, state_.told_heading_sigma_rad));
+  }
+  filter.position_m.z() = antenna_up_m() - (filter.q_body_to_site * tag_.antenna_in_body_m).z();
+  filter.forget(in::position + 2, tag_.height_sigma_m);
+  filter.velocity_mps.setZero();
+  const double speed_sigma = state_.calm ? 0.1 : 0.4 * tag_.speed_max_mps;
+  for (Eigen::Index i = 0; i < 3; ++i) filter.forget(in::velocity + i, i < 2 ? speed_sigma : 0.3);
+  return component;
+}
+
+void StandardTracker::start_at(const Vector2& antenna_m, double sigma_m) {
+  Component component = waking_component();
+  const Vector3 lever = component.filter.q_body_to_site * tag_.antenna_in_body_m;
+  component.filter.position_m.head<2>() = antenna_m - lever.head<2>();
+  for (Eigen::Index i = 0; i < 2; ++i) component.filter.forget(in::position + i, sigma_m);
+  state_.mixture.clear();
+  state_.mixture.add(component);
+  state_.first = false;
+}
+
+void StandardTracker::place(Component& component, double range_m, double bearing_rad, double across_sigma_m) const {
+  FullFilter& filter = component.filter;
+  const Vector2 away(std::cos(bearing_rad), std::sin(bearing_rad));
+  const Vector3 lever = filter.q_body_to_site * tag_.antenna_in_body_m;
+  const Vector2 anchor = site_.anchors[state_.check.anchor()].position_m.head<2>();
+  filter.position_m.head<2>() = anchor + range_m * away - lever.head<2>();
+  for (Eigen::Index i = 0; i < 2; ++i) filter.forget(in::position + i, 0.0);
+  const Vector2 across(-away.y(), away.x());
+  filter.P.block<2, 2>(in::position, in::position) = square(seed_along_sigma_m) * away * away.transpose() +
+                                                     square(across_sigma_m) * across * across.transpose();
+}
+
+void StandardTracker::seed(double weight) {
+  const std::optional<double> range_m = state_.check.level_range_m(state_.time_ns);
+  if (!range_m) return;
+  state_.mixture.order();
+  state_.mixture.thin(1e-3);
+  while (state_.mixture.size() > keep_max) state_.mixture.drop_lightest();
+  const Component base = waking_component();
+  for (Component& component : state_.mixture) component.weight *= 1.0 - weight;
+  if (stands()) {
+    seed_standing(base, *range_m, weight);
+  } else {
+    seed_moving(base, *range_m, weight);
+  }
+  if (state_.first && tag_.start) {
+    // A vague start still tells the sides apart.
+    for (Component& component : state_.mixture) {
+      const double far = (component.filter.position_m.head<2>() - tag_.start->position_m).squaredNorm();
+      component.weight *= std::exp(-0.5 * std::min(far / square(tag_.start->position_sigma_m), 50.0));
+    }
+  }
+  state_.first = false;
+  state_.mixture.normalise();
+  state_.mixture.order();
+  state_.seeded_ns = state_.time_ns;
+  state_.doubt = 0.0;
+  state_.obstructed = 0.05;
+}
+
+void StandardTracker::seed_standing(const Component& base, double range_m, double weight) {
+  const double wanted_m = std::sqrt(2.0 * seed_bend_m * range_m);
+  const int seeds = std::clamp(static_cast<int>(std::numbers::pi * range_m / wanted_m), seeds_min, seeds_max);
+  const double across_sigma_m = std::numbers::pi * range_m / seeds;
+  for (int i = 0; i < seeds; ++i) {
+    Component component = base;
+    place(component, range_m, 2.0 * std::numbers::pi * i / seeds, across_sigma_m);
+    component.filter.velocity_mps.setZero();
+    for (Eigen::Index axis = 0; axis < 3; ++axis) component.filter.forget(in::velocity + axis, 0.1);
+    component.weight = weight / seeds;
+    state_.mixture.add(component);
+  }
+}
+
+void StandardTracker::seed_moving(const Component& base, double range_m, double weight) {
+  const std::optional<RangeRate> rate = state_.check.rate(state_.time_ns);
+  const double rate_sigma = rate ? std::hypot(rate->sigma_mps, 0.1) : 100.0;
+  const double rate_mps = rate ? rate->rate_mps : 0.0;
+  const bool along_heading = points_where_it_goes();
+  const double top_mps = along_heading ? tag_.speed_max_mps : std::min(tag_.speed_max_mps, free_speed_max_mps);
+  const int bearings = along_heading ? bank_bearings : free_bearings;
+  const int velocities = along_heading ? bank_speeds : free_directions * free_speeds + 1;
+  const double bearing_sigma = std::numbers::pi / bearings;
+  // Forward from a little backward on; free ones in rings of speed.
+  const double speed_step = along_heading ? 1.2 * top_mps / (bank_speeds - 1) : top_mps / free_speeds;
+  const double speed_sigma = 0.5 * speed_step;
+  const Vector3 forward = base.filter.q_body_to_site * Vector3::UnitX();
+  const Vector2 course = forward.head<2>().normalized();
+
+  std::array<Candidate, static_cast<std::size_t>(free_bearings * (free_directions * free_speeds + 1))> candidates;
+  static_assert(candidates.size() >= static_cast<std::size_t>(bank_bearings * bank_speeds));
+  std::size_t count = 0;
+  for (int b = 0; b < bearings; ++b) {
+    for (int k = 0; k < velocities; ++k) {
+      Candidate candidate;
+      candidate.bearing_rad = 2.0 * std::numbers::pi * b / bearings;
+      if (along_heading) {
+        candidate.velocity_mps = (k * speed_step - 0.1 * top_mps) * course;
+      } else if (k > 0) {
+        const double angle = 2.0 * std::numbers::pi * ((k - 1) % free_directions) / free_directions;
+        const double speed = speed_step * (1.0 + (k - 1) / free_directions);  // NOLINT(bugprone-integer-division)
+        candidate.velocity_mps = speed * Vector2(std::cos(angle), std::sin(angle));
+      }
+      const Vector2 away(std::cos(candidate.bearing_rad), std::sin(candidate.bearing_rad));
+      const double along = candidate.velocity_mps.dot(away);
+      const double across = candidate.velocity_mps.dot(Vector2(-away.y(), away.x()));
+      const double spread = along_heading ? course.dot(away) * speed_sigma : speed_sigma;
+      const double variance = square(rate_sigma) + square(spread) + square(across * bearing_sigma);
+      candidate.weight = std::exp(-0.5 * square(rate_mps - along) / variance) / std::sqrt(variance);
+      candidates[count++] = candidate;
+    }
+  }
+  const std::size_t room = Mixture::capacity - state_.mixture.size();
+  const auto first = candidates.begin();
+  const auto last = first + static_cast<std::ptrdiff_t>(count);
+  std::sort(first, last, [](const Candidate& a, const Candidate& b) {
+    return a.weight > b.weight || (a.weight == b.weight && a.bearing_rad < b.bearing_rad);
+  });
+  std::size_t taken = std::min(room, count);
+  while (taken > 1 && candidates[taken - 1].weight < seed_share_min * candidates[0].weight) --taken;
+  double total = 0.0;
+  for (std::size_t i = 0; i < taken; ++i) total += candidates[i].weight;
+  for (std::size_t i = 0; i < taken; ++i) {
+    Component component = base;
+    place(component, range_m, candidates[i].bearing_rad, range_m * bearing_sigma);
+    FullFilter& filter = component.filter;
+    filter.velocity_mps.head<2>() = candidates[i].velocity_mps;
+    filter.velocity_mps.z() = along_heading ? 0.0 : filter.velocity_mps.z();
+    for (Eigen::Index axis = 0; axis < 2; ++axis) filter.forget(in::velocity + axis, 0.0);
+    if (along_heading) {
+      filter.P.block<2, 2>(in::velocity, in::velocity) =
+          square(speed_sigma) * course * course.transpose() + 0.0025 * Matrix2::Identity();
+      FullMatrix turn = FullMatrix::Identity();
+      turn.block<2, 1>(in::velocity, in::heading) =
+          Vector2(-filter.velocity_mps.y(), filter.velocity_mps.x());
+      filter.P = (turn * filter.P * turn.transpose()).eval();
+    } else {
+      filter.P.block<2, 2>(in::velocity, in::velocity) = square(speed_sigma) * Matrix2::Identity();
+    }
+    // The range's rate ties bearing and speed together within the seed, too.
+    const Vector2 away(std::cos(candidates[i].bearing_rad), std::sin(candidates[i].bearing_rad));
+    FullLinearised radial;
+    radial.innovation = rate_mps - filter.velocity_mps.head<2>().dot(away);
+    radial.row.segment<2>(in::velocity) = away;
+    radial.row.segment<2>(in::position) =
+        (filter.velocity_mps.head<2>() - filter.velocity_mps.head<2>().dot(away) * away) / range_m;
+    radial.variance = square(rate_sigma);
+    filter.update(radial);
+    component.weight = weight * candidates[i].weight / total;
+    state_.mixture.add(component);
+  }
+}
+
+void StandardTracker::split_wide() {
+  const Vector2 anchor = site_.anchors[state_.check.anchor()].position_m.head<2>();
+  const std::size_t count = state_.mixture.size();
+  for (std::size_t i = 0; i < count && state_.mixture.size() + 2 <= split_max; ++i) {
+    const FullFilter& filter = state_.mixture[i].filter;
+    const Vector2 away = filter.position_m.head<2>() - anchor;
+    const double distance = std::max(away.norm(), range_min_m);
+    const Vector2 across = Vector2(-away.y(), away.x()) / std::max(away.norm(), 1e-3);
+    const double variance = across.dot(filter.P.topLeftCorner<2, 2>() * across);
+    if (variance / (2.0 * distance) < split_bend_m) continue;
+    const std::array<Component, 3> parts = split(state_.mixture[i], across);
+    state_.mixture[i] = parts[1];
+    state_.mixture.add(parts[0]);
+    state_.mixture.add(parts[2]);
+  }
+}
+
+void StandardTracker::double_lead() {
+  const Vector2 velocity = lead().velocity_mps.head<2>();
+  if (!points_where_it_goes() || state_.at_rest || state_.mixture.full() || velocity.norm() < 0.3) return;
+  const Component image =
+      reflected(state_.mixture.lead(), site_.anchors[state_.check.anchor()].position_m, velocity);
+  const Vector2 apart = image.filter.position_m.head<2>() - lead().position_m.head<2>();
+  const double spread = lead().P.topLeftCorner<2, 2>().trace();
+  if (apart.squaredNorm() < std::max(9.0 * spread, 4.0)) return;
+  // Where something lives there already, it speaks for itself.
+  for (const Component& component : state_.mixture) {
+    const Vector2 near = image.filter.position_m.head<2>() - component.filter.position_m.head<2>();
+    if (near.squaredNorm() < std::max(9.0 * spread, 4.0)) return;
+  }
+  Component twin = image;
+  twin.weight = mirror_weight;
+  for (Component& component : state_.mixture) component.weight *= 1.0 - mirror_weight;
+  state_.mixture.add(twin);
+}
+
+}  // namespace kedge::fusion
