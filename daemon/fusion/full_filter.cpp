@@ -29,8 +29,9 @@ double square(double value) { return value * value; }
 
 }  // namespace
 
-void FullFilter::reset(const FullModel& model) {
+void FullFilter::reset(const FullModel& model, const Vector3& pivot) {
   *this = FullFilter{};
+  pivot_m = pivot;
   P.diagonal().segment<3>(in::position).setConstant(square(position_sigma_max_m));
   P.diagonal().segment<3>(in::velocity).setConstant(1.0);
   P.diagonal().segment<3>(in::rotation).setConstant(1.0);
@@ -54,7 +55,6 @@ void FullFilter::move(const FullModel& model, const Vector3& specific_force, con
   position_m += dt_s * velocity_mps + 0.5 * dt_s * dt_s * acceleration;
   velocity_mps += dt_s * acceleration;
   q_body_to_site = (middle * half).normalized();
-  step_.force_mps += dt_s * force;
   step_.time_s += dt_s;
   step_.sample_s2 += dt_s * dt_s;
 }
@@ -73,33 +73,67 @@ void FullFilter::decay(Eigen::Index state, double time_s, double sigma) {
   bias(state) *= keep;
 }
 
-void FullFilter::carry(const Matrix3& R) {
+FullMatrix FullFilter::plain_covariance() const {
+  FullMatrix turn = FullMatrix::Identity();
+  turn.block<3, 3>(in::position, in::rotation) = -skew(position_m - pivot_m);
+  turn.block<3, 3>(in::velocity, in::rotation) = -skew(velocity_mps);
+  return turn * P * turn.transpose();
+}
+
+void FullFilter::set_plain_covariance(const FullMatrix& plain) {
+  FullMatrix turn = FullMatrix::Identity();
+  turn.block<3, 3>(in::position, in::rotation) = skew(position_m - pivot_m);
+  turn.block<3, 3>(in::velocity, in::rotation) = skew(velocity_mps);
+  P = turn * plain * turn.transpose();
+}
+
+Eigen::Matrix4d FullFilter::level_covariance() const {
+  Eigen::Matrix<double, 4, 9> rows = Eigen::Matrix<double, 4, 9>::Zero();
+  rows.block<2, 2>(0, in::position).setIdentity();
+  rows.block<2, 2>(2, in::velocity).setIdentity();
+  rows.block<2, 3>(0, in::rotation) = -skew(position_m - pivot_m).topRows<2>();
+  rows.block<2, 3>(2, in::rotation) = -skew(velocity_mps).topRows<2>();
+  return rows * P.topLeftCorner<9, 9>() * rows.transpose();
+}
+
+void FullFilter::carry(const FullModel& model, double turn_noise) {
   const double dt = step_.time_s;
-  const Matrix3 turned = -skew(step_.force_mps);
-  const Matrix3 biased = -dt * R;
+  const Matrix3 biased = -dt * q_body_to_site.toRotationMatrix();
+  const Matrix3 away = skew(position_m - pivot_m);
+  const Matrix3 speed = skew(velocity_mps);
+  const Matrix3 fall = -model.gravity_mps2 * dt * skew(Vector3::UnitZ());
+  const Matrix3 turned_p = away * biased;
+  const Matrix3 turned_v = speed * biased;
   // F P F^T with F sparse (eq. 50): first the columns, then the rows.
   P.middleCols<3>(in::position) += dt * P.middleCols<3>(in::velocity) +
-                                   P.middleCols<3>(in::rotation) * (0.5 * dt * turned).transpose() +
+                                   P.middleCols<3>(in::rotation) * (0.5 * dt * fall).transpose() +
+                                   P.middleCols<3>(in::gyro) * turned_p.transpose() +
                                    P.middleCols<3>(in::accel) * (0.5 * dt * biased).transpose();
-  P.middleCols<3>(in::velocity) +=
-      P.middleCols<3>(in::rotation) * turned.transpose() + P.middleCols<3>(in::accel) * biased.transpose();
+  P.middleCols<3>(in::velocity) += P.middleCols<3>(in::rotation) * fall.transpose() +
+                                   P.middleCols<3>(in::gyro) * turned_v.transpose() +
+                                   P.middleCols<3>(in::accel) * biased.transpose();
   P.middleCols<3>(in::rotation) += P.middleCols<3>(in::gyro) * biased.transpose();
   P.middleRows<3>(in::position) += dt * P.middleRows<3>(in::velocity) +
-                                   (0.5 * dt * turned) * P.middleRows<3>(in::rotation) +
+                                   (0.5 * dt * fall) * P.middleRows<3>(in::rotation) +
+                                   turned_p * P.middleRows<3>(in::gyro) +
                                    (0.5 * dt * biased) * P.middleRows<3>(in::accel);
-  P.middleRows<3>(in::velocity) += turned * P.middleRows<3>(in::rotation) + biased * P.middleRows<3>(in::accel);
+  P.middleRows<3>(in::velocity) += fall * P.middleRows<3>(in::rotation) + turned_v * P.middleRows<3>(in::gyro) +
+                                   biased * P.middleRows<3>(in::accel);
   P.middleRows<3>(in::rotation) += biased * P.middleRows<3>(in::gyro);
+  // Turning by noise leaves position and velocity where they are: what is left of them turns the other way.
+  Eigen::Matrix<double, 9, 3> noise;
+  noise << away, speed, Matrix3::Identity();
+  P.topLeftCorner<9, 9>() += turn_noise * noise * noise.transpose();
 }
 
 void FullFilter::catch_up(const FullModel& model, bool vibrating, bool at_rest) {
   const double dt = step_.time_s;
   if (!(dt > 0.0)) return;
-  carry(q_body_to_site.toRotationMatrix());
+  carry(model, (square(model.gyro_density_radps_rthz) + square(gyro_floor_radps_rthz)) * dt +
+                   square(blind_turn_radps_rthz) * step_.blind_s);
   const double speed_noise = square(model.accel_density_mps2_rthz) * dt +
                              (vibrating ? square(model.vibration_mps2) * step_.sample_s2 : 0.0) +
                              square(blind_accel_mps2_rthz) * step_.blind_s;
-  const double turn_noise = (square(model.gyro_density_radps_rthz) + square(gyro_floor_radps_rthz)) * dt +
-                            square(blind_turn_radps_rthz) * step_.blind_s;
   for (Eigen::Index axis = 0; axis < 3; ++axis) {
     const Eigen::Index p = in::position + axis;
     const Eigen::Index v = in::velocity + axis;
@@ -107,7 +141,6 @@ void FullFilter::catch_up(const FullModel& model, bool vibrating, bool at_rest) 
     P(p, v) += 0.5 * dt * speed_noise;
     P(v, p) += 0.5 * dt * speed_noise;
     P(p, p) += dt * dt / 3.0 * speed_noise;
-    P(in::rotation + axis, in::rotation + axis) += turn_noise;
     P(in::gyro + axis, in::gyro + axis) += square(gyro_walk_radps_rts) * dt;
     P(in::accel + axis, in::accel + axis) += square(accel_walk_mps2_rts) * dt;
   }
@@ -136,6 +169,13 @@ void FullFilter::limit() {
   }
 }
 
+void FullFilter::invariant(FullLinearised& measurement) const {
+  const Vector3 to_position = measurement.row.segment<3>(in::position);
+  const Vector3 to_velocity = measurement.row.segment<3>(in::velocity);
+  measurement.row.segment<3>(in::rotation) +=
+      (position_m - pivot_m).cross(to_position) + velocity_mps.cross(to_velocity);
+}
+
 FullLinearised FullFilter::range(const Vector3& anchor_m, const Vector3& lever_m, double range_m,
                                  double sigma_m) const {
   const Vector3 lever = q_body_to_site * lever_m;
@@ -151,6 +191,7 @@ FullLinearised FullFilter::range(const Vector3& anchor_m, const Vector3& lever_m
   const Matrix3 across = Matrix3::Identity() - unit * unit.transpose();
   const Matrix3 spread = across * P.block<3, 3>(in::position, in::position) * across;
   result.variance = square(sigma_m) + 0.5 * spread.squaredNorm() / square(std::max(distance, range_min_m));
+  invariant(result);
   return result;
 }
 
@@ -170,6 +211,7 @@ FullLinearised FullFilter::speed(int axis, const Vector3& lever_m, const Vector3
   result.row[in::slip] = axis == 0 ? left.dot(in_body) : (axis == 1 ? -forward.dot(in_body) : 0.0);
   result.row[in::mounting] = result.row[in::slip];
   result.variance = square(sigma_mps);
+  invariant(result);
   return result;
 }
 
@@ -195,6 +237,13 @@ FullLinearised FullFilter::height(const Vector3& lever_m, double up_m, double si
   result.row.segment<3>(in::rotation) = lever.cross(Vector3::UnitZ());
   result.row[in::pressure] = by_pressure ? 1.0 : 0.0;
   result.variance = square(sigma_m);
+  invariant(result);
+  return result;
+}
+
+FullLinearised FullFilter::velocity(Eigen::Index axis, double speed_mps, double sigma_mps) const {
+  FullLinearised result = direct(in::velocity + axis, speed_mps - velocity_mps[axis], sigma_mps);
+  invariant(result);
   return result;
 }
 
@@ -216,25 +265,27 @@ void FullFilter::update(const FullLinearised& measurement, double probability) {
 }
 
 void FullFilter::correct(const FullVector& error) {
-  position_m += error.segment<3>(in::position);
-  velocity_mps += error.segment<3>(in::velocity);
-  q_body_to_site = (rotation_exp(error.segment<3>(in::rotation)) * q_body_to_site).normalized();
+  const Quaternion turn = rotation_exp(error.segment<3>(in::rotation));
+  position_m = pivot_m + turn * (position_m - pivot_m) + error.segment<3>(in::position);
+  velocity_mps = turn * velocity_mps + error.segment<3>(in::velocity);
+  q_body_to_site = (turn * q_body_to_site).normalized();
   biases += error.tail<full_states - in::gyro>();
 }
 
 FullVector FullFilter::difference_to(const FullFilter& other) const {
   FullVector error;
-  error.segment<3>(in::position) = other.position_m - position_m;
-  error.segment<3>(in::velocity) = other.velocity_mps - velocity_mps;
-  error.segment<3>(in::rotation) = rotation_log(other.q_body_to_site * q_body_to_site.conjugate());
+  const Quaternion turn = other.q_body_to_site * q_body_to_site.conjugate();
+  error.segment<3>(in::rotation) = rotation_log(turn);
+  error.segment<3>(in::position) = other.position_m - pivot_m - turn * (position_m - pivot_m);
+  error.segment<3>(in::velocity) = other.velocity_mps - turn * velocity_mps;
   error.tail<full_states - in::gyro>() = other.biases - biases;
   return error;
 }
 
-void FullFilter::forget(Eigen::Index state, double sigma) {
-  P.row(state).setZero();
-  P.col(state).setZero();
-  P(state, state) = square(sigma);
+void forget(FullMatrix& covariance, Eigen::Index state, double sigma) {
+  covariance.row(state).setZero();
+  covariance.col(state).setZero();
+  covariance(state, state) = square(sigma);
 }
 
 bool FullFilter::healthy() const {

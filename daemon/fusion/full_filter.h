@@ -3,11 +3,14 @@
 // Attitude, biases and position are estimated together, so that what the ranges say of a speed corrects the tilt
 // that bent it, and nothing is taken as known that is not. The nominal state moves with every inertial sample;
 // the covariance follows in steps of some samples, whenever a measurement asks for it.
-// Error state order, 20 numbers (Sola, Quaternion kinematics for the error-state Kalman filter, 2017):
+// Error state order, 20 numbers:
 //     position (3, site, of the inertial unit), velocity (3, site), rotation (3, site axes: true = exp(rotation) *
 //     nominal), gyroscope bias (3, body), accelerometer bias (3, body), magnetic disturbance, range bias,
 //     slip (course minus heading, slow), mounting yaw (the same, constant), pressure drift.
-// MATHEMATICS.md, eq. 47 to 58.
+// The errors of position and velocity are what is left once the whole picture is turned by the rotation about a
+// pivot, the anchor (Barrau, Bonnabel, The invariant extended Kalman filter as a stable observer, IEEE TAC 62, 2017).
+// So the turn about the anchor, which ranges cannot see, is one fixed direction of the error state, and the filter
+// never learns it from the wandering of its own linearisation points. MATHEMATICS.md, eq. 47 to 58.
 #pragma once
 
 #include <Eigen/Core>
@@ -58,6 +61,9 @@ struct FullLinearised {
   double variance = 0.0;  ///< of the measurement, second-order terms included
 };
 
+/// The variance of one state becomes sigma^2, its correlations go.
+void forget(FullMatrix& covariance, Eigen::Index state, double sigma);
+
 class FullFilter {
  public:
   Vector3 position_m = Vector3::Zero();
@@ -65,10 +71,15 @@ class FullFilter {
   Quaternion q_body_to_site = Quaternion::Identity();
   /// The nominal values of the error state from gyroscope bias on, in its order.
   Eigen::Matrix<double, full_states - in::gyro, 1> biases = Eigen::Matrix<double, full_states - in::gyro, 1>::Zero();
+  Vector3 pivot_m = Vector3::Zero();  ///< site
   FullMatrix P = FullMatrix::Zero();
 
   /// Everything unknown but what the model bounds; position, velocity and rotation are the caller's to set.
-  void reset(const FullModel& model);
+  void reset(const FullModel& model, const Vector3& pivot_m);
+
+  /// The covariance with the errors of position and velocity taken as plain differences, and back (eq. 48).
+  [[nodiscard]] FullMatrix plain_covariance() const;
+  void set_plain_covariance(const FullMatrix& plain);
 
   /// One inertial sample, body axes, over dt_s: the nominal state alone.
   void move(const FullModel& model, const Vector3& specific_force_mps2, const Vector3& angular_rate_radps, double dt_s);
@@ -89,7 +100,11 @@ class FullFilter {
   [[nodiscard]] FullLinearised field(const Vector3& field_ut, double north_heading_rad, double sigma_rad) const;
   /// Height of the antenna; by pressure, the drift included (eq. 55).
   [[nodiscard]] FullLinearised height(const Vector3& lever_m, double up_m, double sigma_m, bool by_pressure) const;
-  /// One error state measured directly: innovation is measured minus nominal.
+  /// Turns a row for plain errors of position and velocity into one for the errors used here (eq. 49).
+  void invariant(FullLinearised& measurement) const;
+  /// One axis of the velocity, site axes.
+  [[nodiscard]] FullLinearised velocity(Eigen::Index axis, double speed_mps, double sigma_mps) const;
+  /// One error state from rotation on measured directly: innovation is measured minus nominal.
   [[nodiscard]] static FullLinearised direct(Eigen::Index state, double innovation, double sigma);
 
   [[nodiscard]] double innovation_variance(const FullLinearised& measurement) const {
@@ -102,8 +117,8 @@ class FullFilter {
   /// The error state that leads from this nominal state to another's.
   [[nodiscard]] FullVector difference_to(const FullFilter& other) const;
 
-  /// The variance of one state becomes sigma^2, its correlations go.
-  void forget(Eigen::Index state, double sigma);
+  /// Level position and velocity as plain errors: 4 by 4.
+  [[nodiscard]] Eigen::Matrix4d level_covariance() const;
 
   [[nodiscard]] Vector3 gyro_bias_radps() const { return biases.segment<3>(0); }
   [[nodiscard]] Vector3 accel_bias_mps2() const { return biases.segment<3>(in::accel - in::gyro); }
@@ -116,19 +131,18 @@ class FullFilter {
 
   template <class Archive>
   void fields(Archive& archive) {
-    archive(position_m, velocity_mps, q_body_to_site, biases, P, step_.force_mps, step_.time_s, step_.sample_s2,
+    archive(position_m, velocity_mps, q_body_to_site, biases, pivot_m, P, step_.time_s, step_.sample_s2,
             step_.blind_s);
   }
 
  private:
   /// What the covariance has not seen yet.
   struct Step {
-    Vector3 force_mps = Vector3::Zero();  ///< integral of the specific force, site axes
     double time_s = 0.0;
     double sample_s2 = 0.0;  ///< sum of the samples' squared lengths
     double blind_s = 0.0;    ///< of it, without inertial data
   };
-  void carry(const Matrix3& R);
+  void carry(const FullModel& model, double turn_noise);
   void decay(Eigen::Index state, double time_s, double sigma);
   void limit();
 

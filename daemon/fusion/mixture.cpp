@@ -16,28 +16,17 @@ constexpr double alike_square = 0.5;
 /// The same for a component and the cluster it joins.
 constexpr double together_square = 9.0;
 
-using Plane = Eigen::Matrix<double, 4, 1>;
+/// Evidence counts for so much: neighbouring measurements err alike, and the models of motion are not exact.
+constexpr double evidence = 0.5;
 
 /// What tells hypotheses apart: level position and velocity.
 double distance_square(const Component& a, const Component& b) {
-  const Vector2 apart = a.filter.position_m.head<2>() - b.filter.position_m.head<2>();
-  const Matrix2 near = a.filter.P.topLeftCorner<2, 2>() + b.filter.P.topLeftCorner<2, 2>();
-  const double in_position = apart.dot(near.inverse() * apart);
-  if (in_position > alike_square) return in_position;
-  const auto part = [](const Component& c) {
-    Plane value;
-    value << c.filter.position_m.head<2>(), c.filter.velocity_mps.head<2>();
-    return value;
-  };
-  const auto spread = [](const Component& c) {
-    Eigen::Matrix4d value;
-    value << c.filter.P.block<2, 2>(in::position, in::position), c.filter.P.block<2, 2>(in::position, in::velocity),
-        c.filter.P.block<2, 2>(in::velocity, in::position), c.filter.P.block<2, 2>(in::velocity, in::velocity);
-    return value;
-  };
-  const Plane difference = part(a) - part(b);
-  const Eigen::Matrix4d both = spread(a) + spread(b) + 1e-6 * Eigen::Matrix4d::Identity();
-  return difference.dot(both.ldlt().solve(difference));
+  Eigen::Vector4d apart;
+  apart << a.filter.position_m.head<2>() - b.filter.position_m.head<2>(),
+      a.filter.velocity_mps.head<2>() - b.filter.velocity_mps.head<2>();
+  const Eigen::Matrix4d both =
+      a.filter.level_covariance() + b.filter.level_covariance() + 1e-6 * Eigen::Matrix4d::Identity();
+  return apart.dot(both.ldlt().solve(apart));
 }
 
 /// Position and velocity of one component's antenna, as a cluster of its own.
@@ -46,14 +35,17 @@ Cluster alone(const Component& component, const Vector3& lever_m, const Vector3&
   const Vector3 lever = filter.q_body_to_site * lever_m;
   Eigen::Matrix<double, 3, full_states> row = Eigen::Matrix<double, 3, full_states>::Zero();
   row.block<3, 3>(0, in::position).setIdentity();
-  row.block<3, 3>(0, in::rotation) = -skew(lever);
+  row.block<3, 3>(0, in::rotation) = -skew(filter.position_m + lever - filter.pivot_m);
+  Eigen::Matrix<double, 3, full_states> row_speed = Eigen::Matrix<double, 3, full_states>::Zero();
+  row_speed.block<3, 3>(0, in::velocity).setIdentity();
+  row_speed.block<3, 3>(0, in::rotation) = -skew(filter.velocity_mps);
   Cluster cluster;
   cluster.weight = component.weight;
   cluster.position_m = filter.position_m + lever;
   cluster.position_covariance_m2 = row * filter.P * row.transpose();
   cluster.velocity_mps =
       filter.velocity_mps + filter.q_body_to_site * (rate_radps - filter.gyro_bias_radps()).cross(lever_m);
-  cluster.velocity_covariance_m2ps2 = filter.P.block<3, 3>(in::velocity, in::velocity);
+  cluster.velocity_covariance_m2ps2 = row_speed * filter.P * row_speed.transpose();
   return cluster;
 }
 
@@ -105,7 +97,7 @@ void Mixture::reweigh(const LogLikelihoods& log_likelihoods) {
   double best = log_likelihoods[0];
   for (std::size_t i = 1; i < components_.size(); ++i) best = std::max(best, log_likelihoods[i]);
   if (!std::isfinite(best)) return;
-  for (std::size_t i = 0; i < components_.size(); ++i) components_[i].weight *= std::exp(log_likelihoods[i] - best);
+  for (std::size_t i = 0; i < components_.size(); ++i) components_[i].weight *= std::exp(evidence * (log_likelihoods[i] - best));
   normalise();
 }
 
@@ -220,7 +212,7 @@ Component reflected(const Component& original, const Vector3& anchor_m, const Ve
   T(in::gyro, in::gyro) = T(in::gyro + 2, in::gyro + 2) = -1.0;
   T(in::accel + 1, in::accel + 1) = -1.0;
   T(in::field, in::field) = T(in::slip, in::slip) = T(in::mounting, in::mounting) = -1.0;
-  filter.P = (T * original.filter.P * T.transpose()).eval();
+  filter.set_plain_covariance(T * original.filter.plain_covariance() * T.transpose());
   return image;
 }
 

@@ -120,12 +120,14 @@ void StandardTracker::correct_position(const CorrectionMeasurement& measurement)
   std::iter_swap(state_.mixture.begin(), nearest);
   state_.mixture.keep_lead();
   const Vector3 lever = lead().q_body_to_site * tag_.antenna_in_body_m;
+  FullMatrix plain = lead().plain_covariance();
   lead().position_m.head<2>() = position - lever.head<2>();
-  for (Eigen::Index i = 0; i < 2; ++i) lead().forget(in::position + i, sigma);
+  for (Eigen::Index i = 0; i < 2; ++i) forget(plain, in::position + i, sigma);
   if (measurement.up_m && state_.airborne) {
     lead().position_m.z() = *measurement.up_m - lever.z();
-    lead().forget(in::position + 2, sigma);
+    forget(plain, in::position + 2, sigma);
   }
+  lead().set_plain_covariance(plain);
   state_.doubt = 0.0;
 }
 
@@ -139,11 +141,13 @@ void StandardTracker::correct_heading(double heading_rad, double sigma_rad) {
   for (Component& component : state_.mixture) {
     FullFilter& filter = component.filter;
     const double turn = wrap_angle(heading_rad - filter.heading_rad());
+    FullMatrix plain = filter.plain_covariance();
     const Quaternion about_up = level_attitude(turn);
     filter.q_body_to_site = (about_up * filter.q_body_to_site).normalized();
     // A tag that points where it goes turns its velocity along.
     if (points_where_it_goes()) filter.velocity_mps = about_up * filter.velocity_mps;
-    filter.forget(in::heading, sigma_rad);
+    forget(plain, in::heading, sigma_rad);
+    filter.set_plain_covariance(plain);
   }
 }
 

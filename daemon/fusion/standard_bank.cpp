@@ -53,7 +53,7 @@ Component StandardTracker::waking_component() const {
   Component component;
   component.weight = 1.0;
   FullFilter& filter = component.filter;
-  filter.reset(model_);
+  filter.reset(model_, site_.anchors[state_.check.anchor()].position_m);
   filter.q_body_to_site = attitude.q_body_to_site;
   filter.biases.head<3>() = attitude.gyro_bias_radps;
   filter.P.diagonal().segment<3>(in::gyro).setConstant(
@@ -83,10 +83,10 @@ Component StandardTracker::waking_component() const {
     filter.update(FullFilter::direct(in::heading, innovation, state_.told_heading_sigma_rad));
   }
   filter.position_m.z() = antenna_up_m() - (filter.q_body_to_site * tag_.antenna_in_body_m).z();
-  filter.forget(in::position + 2, tag_.height_sigma_m);
+  forget(filter.P, in::position + 2, tag_.height_sigma_m);
   filter.velocity_mps.setZero();
   const double speed_sigma = state_.calm ? 0.1 : 0.4 * tag_.speed_max_mps;
-  for (Eigen::Index i = 0; i < 3; ++i) filter.forget(in::velocity + i, i < 2 ? speed_sigma : 0.3);
+  for (Eigen::Index i = 0; i < 3; ++i) forget(filter.P, in::velocity + i, i < 2 ? speed_sigma : 0.3);
   return component;
 }
 
@@ -94,7 +94,8 @@ void StandardTracker::start_at(const Vector2& antenna_m, double sigma_m) {
   Component component = waking_component();
   const Vector3 lever = component.filter.q_body_to_site * tag_.antenna_in_body_m;
   component.filter.position_m.head<2>() = antenna_m - lever.head<2>();
-  for (Eigen::Index i = 0; i < 2; ++i) component.filter.forget(in::position + i, sigma_m);
+  for (Eigen::Index i = 0; i < 2; ++i) forget(component.filter.P, in::position + i, sigma_m);
+  component.filter.set_plain_covariance(component.filter.P);
   state_.mixture.clear();
   state_.mixture.add(component);
   state_.first = false;
@@ -106,7 +107,7 @@ void StandardTracker::place(Component& component, double range_m, double bearing
   const Vector3 lever = filter.q_body_to_site * tag_.antenna_in_body_m;
   const Vector2 anchor = site_.anchors[state_.check.anchor()].position_m.head<2>();
   filter.position_m.head<2>() = anchor + range_m * away - lever.head<2>();
-  for (Eigen::Index i = 0; i < 2; ++i) filter.forget(in::position + i, 0.0);
+  for (Eigen::Index i = 0; i < 2; ++i) forget(filter.P, in::position + i, 0.0);
   const Vector2 across(-away.y(), away.x());
   filter.P.block<2, 2>(in::position, in::position) = square(seed_along_sigma_m) * away * away.transpose() +
                                                      square(across_sigma_m) * across * across.transpose();
@@ -148,7 +149,8 @@ void StandardTracker::seed_standing(const Component& base, double range_m, doubl
     Component component = base;
     place(component, range_m, 2.0 * std::numbers::pi * i / seeds, across_sigma_m);
     component.filter.velocity_mps.setZero();
-    for (Eigen::Index axis = 0; axis < 3; ++axis) component.filter.forget(in::velocity + axis, 0.1);
+    for (Eigen::Index axis = 0; axis < 3; ++axis) forget(component.filter.P, in::velocity + axis, 0.1);
+    component.filter.set_plain_covariance(component.filter.P);
     component.weight = weight / seeds;
     state_.mixture.add(component);
   }
@@ -208,7 +210,7 @@ void StandardTracker::seed_moving(const Component& base, double range_m, double 
     FullFilter& filter = component.filter;
     filter.velocity_mps.head<2>() = candidates[i].velocity_mps;
     filter.velocity_mps.z() = along_heading ? 0.0 : filter.velocity_mps.z();
-    for (Eigen::Index axis = 0; axis < 2; ++axis) filter.forget(in::velocity + axis, 0.0);
+    for (Eigen::Index axis = 0; axis < 2; ++axis) forget(filter.P, in::velocity + axis, 0.0);
     if (along_heading) {
       filter.P.block<2, 2>(in::velocity, in::velocity) =
           square(speed_sigma) * course * course.transpose() + 0.0025 * Matrix2::Identity();
@@ -219,6 +221,7 @@ void StandardTracker::seed_moving(const Component& base, double range_m, double 
     } else {
       filter.P.block<2, 2>(in::velocity, in::velocity) = square(speed_sigma) * Matrix2::Identity();
     }
+    filter.set_plain_covariance(filter.P);
     // The range's rate ties bearing and speed together within the seed, too.
     const Vector2 away(std::cos(candidates[i].bearing_rad), std::sin(candidates[i].bearing_rad));
     FullLinearised radial;
@@ -227,6 +230,7 @@ void StandardTracker::seed_moving(const Component& base, double range_m, double 
     radial.row.segment<2>(in::position) =
         (filter.velocity_mps.head<2>() - filter.velocity_mps.head<2>().dot(away) * away) / range_m;
     radial.variance = square(rate_sigma);
+    filter.invariant(radial);
     filter.update(radial);
     component.weight = weight * candidates[i].weight / total;
     state_.mixture.add(component);
@@ -256,7 +260,7 @@ void StandardTracker::double_lead() {
   const Component image =
       reflected(state_.mixture.lead(), site_.anchors[state_.check.anchor()].position_m, velocity);
   const Vector2 apart = image.filter.position_m.head<2>() - lead().position_m.head<2>();
-  const double spread = lead().P.topLeftCorner<2, 2>().trace();
+  const double spread = lead().level_covariance().topLeftCorner<2, 2>().trace();
   if (apart.squaredNorm() < std::max(9.0 * spread, 4.0)) return;
   // Where something lives there already, it speaks for itself.
   for (const Component& component : state_.mixture) {

@@ -119,7 +119,7 @@ bool StandardTracker::doubtful() const {
   // A field that is off by more than it ever is: the heading is.
   if (std::abs(lead().bias(in::field)) > doubt_sigmas * model_.field_sigma_rad) return true;
   const double speed = lead().velocity_mps.norm();
-  const double sigma = std::sqrt(lead().P.diagonal().segment<2>(in::velocity).sum());
+  const double sigma = std::sqrt(lead().level_covariance().bottomRightCorner<2, 2>().trace());
   if (speed > 1.2 * tag_.speed_max_mps + 2.0 * sigma) return true;
   const std::optional<SpeedCheck::Speed> check = state_.check.speed(state_.time_ns);
   return check && !state_.at_rest &&

@@ -261,7 +261,7 @@ bool StandardTracker::moves_softly() const {
 }
 
 bool StandardTracker::fast() const {
-  const double sigma = std::sqrt(lead().P.diagonal().segment<3>(in::velocity).sum());
+  const double sigma = std::sqrt(lead().level_covariance().bottomRightCorner<2, 2>().trace());
   return lead().velocity_mps.norm() - 3.0 * sigma > 0.3;
 }
 
@@ -274,7 +274,7 @@ void StandardTracker::hold_to_profile() {
     for (Eigen::Index axis = 0; axis < 3; ++axis) {
       update_all(
           [&](const FullFilter& f) {
-            return FullFilter::direct(in::velocity + axis, -f.velocity_mps[axis], rest_speed_sigma_mps);
+            return f.velocity(axis, 0.0, rest_speed_sigma_mps);
           },
           true);
       if (!state_.at_rest || !(state_.turned_s > 0.0)) continue;

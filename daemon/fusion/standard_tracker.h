@@ -110,11 +110,13 @@ class StandardTracker final : public MarkedEstimator<StandardState, 24> {
   void wake();
 
   // standard_bank.cpp: where hypotheses come from.
+  /// Attitude and biases as they are known before any range; its covariance is plain.
   [[nodiscard]] Component waking_component() const;
   void start_at(const Vector2& antenna_m, double sigma_m);
   void seed(double weight);
   void seed_standing(const Component& base, double range_m, double weight);
   void seed_moving(const Component& base, double range_m, double weight);
+  /// Level position on the ring; the covariance is plain.
   void place(Component& component, double range_m, double bearing_rad, double across_sigma_m) const;
   void split_wide();
   void double_lead();
