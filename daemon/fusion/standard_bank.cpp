@@ -10,10 +10,10 @@ namespace kedge::fusion {
 namespace {
 
 /// Across the line of sight a seed is so wide that the circle bends away by this much from a straight line.
-constexpr double seed_bend_m = 0.05;
+constexpr double seed_bend_m = 0.03;
 constexpr double seed_along_sigma_m = 0.5;
 constexpr int seeds_min = 24;
-constexpr int seeds_max = 72;
+constexpr int seeds_max = 96;
 constexpr double tilt_sigma_calm_rad = radians(0.15);
 constexpr double level_lag_s = 0.7;
 constexpr double tilt_sigma_moving_rad = radians(2.0);
@@ -34,8 +34,9 @@ constexpr double seed_share_min = 1e-3;
 constexpr std::size_t keep_max = 8;
 constexpr double mirror_weight = 0.002;
 /// A component under which the circle bends by more than this is split.
-constexpr double split_bend_m = 0.07;
-constexpr std::size_t split_max = 48;
+constexpr double split_bend_m = 0.008;
+constexpr std::size_t split_max = 120;
+constexpr double split_weight_min = 1e-3;
 constexpr double range_min_m = 0.5;
 
 struct Candidate {
@@ -246,7 +247,7 @@ void StandardTracker::split_wide() {
     const double distance = std::max(away.norm(), range_min_m);
     const Vector2 across = Vector2(-away.y(), away.x()) / std::max(away.norm(), 1e-3);
     const double variance = across.dot(filter.P.topLeftCorner<2, 2>() * across);
-    if (variance / (2.0 * distance) < split_bend_m) continue;
+    if (variance / (2.0 * distance) < split_bend_m || state_.mixture[i].weight < split_weight_min) continue;
     const std::array<Component, 3> parts = split(state_.mixture[i], across);
     state_.mixture[i] = parts[1];
     state_.mixture.add(parts[0]);

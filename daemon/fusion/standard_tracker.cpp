@@ -26,6 +26,7 @@ constexpr double leave_force_mps2 = 0.12;
 constexpr double leave_rate_mps = 0.1;
 constexpr double rest_rate_sigma_max_mps = 0.1;
 constexpr TimeNs lean_patience_ns = 4 * ns_per_s;
+constexpr TimeNs free_rest_ns = 2'500 * ns_per_ms;
 constexpr double rest_speed_sigma_mps = 0.03;
 constexpr double rest_turn_sigma_radps = 2e-4;
 /// Standing, the field is heard for so long; then its wandering would only be taken for turning.
@@ -219,7 +220,7 @@ void StandardTracker::judge_rest() {
   state_.calm = state_.stops.calm(site_.gravity_mps2);
   if (quiet && !state_.quiet) state_.quiet_since_ns = state_.time_ns;
   state_.quiet = quiet;
-  if (state_.stops.loud()) state_.moved = true;
+  if (state_.stops.loud() && !state_.calm) state_.moved = true;
   if (state_.at_rest) {
     if (quiet && !moves_softly()) return;
     state_.at_rest = false;
@@ -234,6 +235,8 @@ void StandardTracker::judge_rest() {
     return;
   }
   if (!quiet || ranges_move() || leans() || (located() && fast())) return;
+  // What may turn on the spot is not at rest for a moment between two turns.
+  if (!points_where_it_goes() && state_.time_ns - state_.quiet_since_ns < free_rest_ns) return;
   state_.at_rest = true;
   state_.rest_since_ns = state_.time_ns;
   state_.rest_force_mps2 = state_.stops.mean_force_mps2();
