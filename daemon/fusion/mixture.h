@@ -40,7 +40,7 @@ struct Clusters {
 
 class Mixture {
  public:
-  static constexpr std::size_t capacity = 160;
+  static constexpr std::size_t capacity = 320;
   using LogLikelihoods = std::array<double, capacity>;
 
   /// The memory is taken here, once; copying copies only what lives.

@@ -35,8 +35,8 @@ constexpr std::size_t keep_max = 8;
 constexpr double mirror_weight = 0.002;
 /// A component under which the circle bends by more than this is split.
 constexpr double split_bend_m = 0.008;
-constexpr std::size_t split_max = 120;
-constexpr double split_weight_min = 1e-3;
+constexpr std::size_t split_max = 280;
+constexpr double split_weight_min = 1e-5;
 constexpr double range_min_m = 0.5;
 
 struct Candidate {

@@ -80,7 +80,7 @@ struct StandardState {
   }
 };
 
-class StandardTracker final : public MarkedEstimator<StandardState, 24> {
+class StandardTracker final : public MarkedEstimator<StandardState, 12> {
  public:
   /// Both must outlive the tracker.
   StandardTracker(const Site& site, const Tag& tag);
