@@ -63,7 +63,7 @@ struct InertialModel {
 struct Tag {
   std::string name;
   Profile profile = Profile::wheeled;
-  Method method = Method::speed_aided;
+  Method method = Method::mixture;
   double antenna_height_m = 0.5;  ///< above the ground
   double height_sigma_m = 0.1;
   double speed_max_mps = 3.0;
