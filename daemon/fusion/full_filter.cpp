@@ -105,20 +105,18 @@ void FullFilter::carry(const FullModel& model, double turn_noise) {
   const Matrix3 turned_p = away * biased;
   const Matrix3 turned_v = speed * biased;
   // F P F^T with F sparse (eq. 50): first the columns, then the rows.
-  P.middleCols<3>(in::position) += dt * P.middleCols<3>(in::velocity) +
-                                   P.middleCols<3>(in::rotation) * (0.5 * dt * fall).transpose() +
-                                   P.middleCols<3>(in::gyro) * turned_p.transpose() +
-                                   P.middleCols<3>(in::accel) * (0.5 * dt * biased).transpose();
+  P.middleCols<3>(in::position) +=
+      dt * P.middleCols<3>(in::velocity) + P.middleCols<3>(in::rotation) * (0.5 * dt * fall).transpose() +
+      P.middleCols<3>(in::gyro) * turned_p.transpose() + P.middleCols<3>(in::accel) * (0.5 * dt * biased).transpose();
   P.middleCols<3>(in::velocity) += P.middleCols<3>(in::rotation) * fall.transpose() +
                                    P.middleCols<3>(in::gyro) * turned_v.transpose() +
                                    P.middleCols<3>(in::accel) * biased.transpose();
   P.middleCols<3>(in::rotation) += P.middleCols<3>(in::gyro) * biased.transpose();
-  P.middleRows<3>(in::position) += dt * P.middleRows<3>(in::velocity) +
-                                   (0.5 * dt * fall) * P.middleRows<3>(in::rotation) +
-                                   turned_p * P.middleRows<3>(in::gyro) +
-                                   (0.5 * dt * biased) * P.middleRows<3>(in::accel);
-  P.middleRows<3>(in::velocity) += fall * P.middleRows<3>(in::rotation) + turned_v * P.middleRows<3>(in::gyro) +
-                                   biased * P.middleRows<3>(in::accel);
+  P.middleRows<3>(in::position) +=
+      dt * P.middleRows<3>(in::velocity) + (0.5 * dt * fall) * P.middleRows<3>(in::rotation) +
+      turned_p * P.middleRows<3>(in::gyro) + (0.5 * dt * biased) * P.middleRows<3>(in::accel);
+  P.middleRows<3>(in::velocity) +=
+      fall * P.middleRows<3>(in::rotation) + turned_v * P.middleRows<3>(in::gyro) + biased * P.middleRows<3>(in::accel);
   P.middleRows<3>(in::rotation) += biased * P.middleRows<3>(in::gyro);
   // Turning by noise leaves position and velocity where they are: what is left of them turns the other way.
   Eigen::Matrix<double, 9, 3> noise;
@@ -219,8 +217,7 @@ FullLinearised FullFilter::field(const Vector3& field_ut, double north_heading_r
   const Vector3 in_site = q_body_to_site * field_ut;
   const double level_square = std::max(in_site.head<2>().squaredNorm(), 1e-6);
   FullLinearised result;
-  result.innovation =
-      wrap_angle(std::atan2(in_site.y(), in_site.x()) - north_heading_rad - bias(in::field));
+  result.innovation = wrap_angle(std::atan2(in_site.y(), in_site.x()) - north_heading_rad - bias(in::field));
   result.row[in::rotation] = in_site.x() * in_site.z() / level_square;
   result.row[in::rotation + 1] = in_site.y() * in_site.z() / level_square;
   result.row[in::heading] = -1.0;

@@ -131,8 +131,7 @@ class FullFilter {
 
   template <class Archive>
   void fields(Archive& archive) {
-    archive(position_m, velocity_mps, q_body_to_site, biases, pivot_m, P, step_.time_s, step_.sample_s2,
-            step_.blind_s);
+    archive(position_m, velocity_mps, q_body_to_site, biases, pivot_m, P, step_.time_s, step_.sample_s2, step_.blind_s);
   }
 
  private:

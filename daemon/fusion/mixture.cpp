@@ -97,7 +97,8 @@ void Mixture::reweigh(const LogLikelihoods& log_likelihoods) {
   double best = log_likelihoods[0];
   for (std::size_t i = 1; i < components_.size(); ++i) best = std::max(best, log_likelihoods[i]);
   if (!std::isfinite(best)) return;
-  for (std::size_t i = 0; i < components_.size(); ++i) components_[i].weight *= std::exp(evidence * (log_likelihoods[i] - best));
+  for (std::size_t i = 0; i < components_.size(); ++i)
+    components_[i].weight *= std::exp(evidence * (log_likelihoods[i] - best));
   normalise();
 }
 
@@ -171,8 +172,7 @@ Component merged(const Component& a, const Component& b) {
   const FullVector apart = a.filter.difference_to(b.filter);
   Component result = a;
   result.weight = total;
-  result.filter.P =
-      (1.0 - share) * a.filter.P + share * b.filter.P + share * (1.0 - share) * apart * apart.transpose();
+  result.filter.P = (1.0 - share) * a.filter.P + share * b.filter.P + share * (1.0 - share) * apart * apart.transpose();
   result.filter.correct(share * apart);
   return result;
 }

@@ -110,8 +110,8 @@ void StandardTracker::place(Component& component, double range_m, double bearing
   filter.position_m.head<2>() = anchor + range_m * away - lever.head<2>();
   for (Eigen::Index i = 0; i < 2; ++i) forget(filter.P, in::position + i, 0.0);
   const Vector2 across(-away.y(), away.x());
-  filter.P.block<2, 2>(in::position, in::position) = square(seed_along_sigma_m) * away * away.transpose() +
-                                                     square(across_sigma_m) * across * across.transpose();
+  filter.P.block<2, 2>(in::position, in::position) =
+      square(seed_along_sigma_m) * away * away.transpose() + square(across_sigma_m) * across * across.transpose();
 }
 
 void StandardTracker::seed(double weight) {
@@ -216,8 +216,7 @@ void StandardTracker::seed_moving(const Component& base, double range_m, double 
       filter.P.block<2, 2>(in::velocity, in::velocity) =
           square(speed_sigma) * course * course.transpose() + 0.0025 * Matrix2::Identity();
       FullMatrix turn = FullMatrix::Identity();
-      turn.block<2, 1>(in::velocity, in::heading) =
-          Vector2(-filter.velocity_mps.y(), filter.velocity_mps.x());
+      turn.block<2, 1>(in::velocity, in::heading) = Vector2(-filter.velocity_mps.y(), filter.velocity_mps.x());
       filter.P = (turn * filter.P * turn.transpose()).eval();
     } else {
       filter.P.block<2, 2>(in::velocity, in::velocity) = square(speed_sigma) * Matrix2::Identity();
@@ -258,8 +257,7 @@ void StandardTracker::split_wide() {
 void StandardTracker::double_lead() {
   const Vector2 velocity = lead().velocity_mps.head<2>();
   if (!points_where_it_goes() || state_.at_rest || state_.mixture.full() || velocity.norm() < 0.3) return;
-  const Component image =
-      reflected(state_.mixture.lead(), site_.anchors[state_.check.anchor()].position_m, velocity);
+  const Component image = reflected(state_.mixture.lead(), site_.anchors[state_.check.anchor()].position_m, velocity);
   const Vector2 apart = image.filter.position_m.head<2>() - lead().position_m.head<2>();
   const double spread = lead().level_covariance().topLeftCorner<2, 2>().trace();
   if (apart.squaredNorm() < std::max(9.0 * spread, 4.0)) return;

@@ -275,13 +275,10 @@ void StandardTracker::hold_to_profile() {
   const Vector3 rate = state_.inertial.angular_rate_radps;
   if (stands()) {
     for (Eigen::Index axis = 0; axis < 3; ++axis) {
-      update_all(
-          [&](const FullFilter& f) {
-            return f.velocity(axis, 0.0, rest_speed_sigma_mps);
-          },
-          true);
+      update_all([&](const FullFilter& f) { return f.velocity(axis, 0.0, rest_speed_sigma_mps); }, true);
       if (!state_.at_rest || !(state_.turned_s > 0.0)) continue;
-      const double sigma = std::hypot(model_.gyro_density_radps_rthz / std::sqrt(state_.turned_s), rest_turn_sigma_radps);
+      const double sigma =
+          std::hypot(model_.gyro_density_radps_rthz / std::sqrt(state_.turned_s), rest_turn_sigma_radps);
       const double turning = state_.turned_rad[axis] / state_.turned_s;
       update_all(
           [&](const FullFilter& f) {
@@ -303,8 +300,8 @@ void StandardTracker::hold_to_profile() {
   if (state_.airborne || state_.time_ns - state_.height_ns < height_spacing_ns) return;
   state_.height_ns = state_.time_ns;
   const double sigma = tag_.height_sigma_m * std::sqrt(height_repeats);
-  update_all(
-      [&](const FullFilter& f) { return f.height(tag_.antenna_in_body_m, antenna_up_m(), sigma, false); }, false);
+  update_all([&](const FullFilter& f) { return f.height(tag_.antenna_in_body_m, antenna_up_m(), sigma, false); },
+             false);
 }
 
 void StandardTracker::take_field(const Vector3& field_ut) {

@@ -49,7 +49,7 @@ struct StandardState {
   Mixture mixture;
   Vector3 turned_rad = Vector3::Zero();  ///< integral of the angular rate since the profile was last applied, body axes
   double turned_s = 0.0;
-  TimeNs field_ns = 0;  ///< last field used
+  TimeNs field_ns = 0;        ///< last field used
   TimeNs constrained_ns = 0;  ///< when motion was last held to its profile
   TimeNs thinned_ns = 0;
   TimeNs doubled_ns = 0;  ///< when a mirror image was last put back
@@ -73,10 +73,11 @@ struct StandardState {
 
   template <class Archive>
   void fields(Archive& archive) {
-    archive(time_ns, begun, first, begun_ns, awake, attitude, told_heading_rad, told_heading_sigma_rad, stops, motion, gained_mps, inertial,
-            has_inertial, inertial_ns, at_rest, rest_since_ns, quiet, quiet_since_ns, moved, calm, rest_force_mps2,
-            mixture, turned_rad, turned_s, field_ns, constrained_ns, thinned_ns, doubled_ns, height_ns, seeded_ns, check, obstructed, doubt, sure_ns, range_ns,
-            range_excess_m, range_gated_share, airborne, pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad);
+    archive(time_ns, begun, first, begun_ns, awake, attitude, told_heading_rad, told_heading_sigma_rad, stops, motion,
+            gained_mps, inertial, has_inertial, inertial_ns, at_rest, rest_since_ns, quiet, quiet_since_ns, moved, calm,
+            rest_force_mps2, mixture, turned_rad, turned_s, field_ns, constrained_ns, thinned_ns, doubled_ns, height_ns,
+            seeded_ns, check, obstructed, doubt, sure_ns, range_ns, range_excess_m, range_gated_share, airborne,
+            pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad);
   }
 };
 

@@ -1,6 +1,5 @@
 #include "fusion/tracker.h"
 
-#include <atomic>
 #include <catch2/catch.hpp>
 #include <cstdlib>
 #include <limits>
@@ -8,14 +7,16 @@
 #include <span>
 
 #include "simulation/sensors.h"
+#include "support/allocations.h"
 
 using namespace kedge;
 using namespace kedge::fusion;
 using simulation::Scenario;
 
-namespace {
+namespace kedge::test {
 std::atomic<long> allocations{0};
-}  // namespace
+}  // namespace kedge::test
+using kedge::test::allocations;
 
 // Counted, so that a test can see that the hot path asks for no memory.
 void* operator new(std::size_t size) {
