@@ -87,6 +87,12 @@ void FullFilter::set_plain_covariance(const FullMatrix& plain) {
   P = turn * plain * turn.transpose();
 }
 
+void FullFilter::set_pivot(const Vector3& pivot) {
+  const FullMatrix plain = plain_covariance();
+  pivot_m = pivot;
+  set_plain_covariance(plain);
+}
+
 Eigen::Matrix4d FullFilter::level_covariance() const {
   Eigen::Matrix<double, 4, 9> rows = Eigen::Matrix<double, 4, 9>::Zero();
   rows.block<2, 2>(0, in::position).setIdentity();

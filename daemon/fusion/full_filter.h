@@ -80,6 +80,8 @@ class FullFilter {
   /// The covariance with the errors of position and velocity taken as plain differences, and back (eq. 48).
   [[nodiscard]] FullMatrix plain_covariance() const;
   void set_plain_covariance(const FullMatrix& plain);
+  /// The same knowledge about another pivot.
+  void set_pivot(const Vector3& pivot);
 
   /// One inertial sample, body axes, over dt_s: the nominal state alone.
   void move(const FullModel& model, const Vector3& specific_force_mps2, const Vector3& angular_rate_radps, double dt_s);

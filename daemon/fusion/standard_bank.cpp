@@ -17,6 +17,7 @@ constexpr int seeds_max = 96;
 constexpr double tilt_sigma_calm_rad = radians(0.15);
 constexpr double level_lag_s = 0.7;
 constexpr double tilt_sigma_moving_rad = radians(2.0);
+constexpr double tilt_sigma_air_rad = radians(4.0);
 constexpr double heading_start_sigma_rad = radians(1.0);
 constexpr double dip_typical_rad = radians(60.0);
 constexpr double gyro_bias_sigma_min_radps = 5e-5;
@@ -49,12 +50,16 @@ double square(double value) { return value * value; }
 
 }  // namespace
 
+Vector3 StandardTracker::pivot_m() const {
+  return site_.anchors.empty() ? Vector3(Vector3::Zero()) : site_.anchors[state_.check.anchor()].position_m;
+}
+
 Component StandardTracker::waking_component() const {
   const AttitudeFilter& attitude = state_.attitude;
   Component component;
   component.weight = 1.0;
   FullFilter& filter = component.filter;
-  filter.reset(model_, site_.anchors[state_.check.anchor()].position_m);
+  filter.reset(model_, pivot_m());
   filter.q_body_to_site = attitude.q_body_to_site;
   filter.biases.head<3>() = attitude.gyro_bias_radps;
   filter.P.diagonal().segment<3>(in::gyro).setConstant(
@@ -64,7 +69,8 @@ Component StandardTracker::waking_component() const {
   filter.P.block<3, 3>(in::rotation, in::rotation).setZero();
   // Averaging gravity lags behind what the bias turns.
   const double lag_sigma = std::sqrt(attitude.gyro_bias_variance) * level_lag_s;
-  const double tilt_sigma = state_.calm ? std::hypot(tilt_sigma_calm_rad, lag_sigma) : tilt_sigma_moving_rad;
+  const double tilt_sigma = state_.calm ? std::hypot(tilt_sigma_calm_rad, lag_sigma)
+                                        : (points_where_it_goes() ? tilt_sigma_moving_rad : tilt_sigma_air_rad);
   filter.P.diagonal().segment<2>(in::rotation).setConstant(square(tilt_sigma));
   common.block<3, 3>(in::rotation, in::accel) =
       skew(Vector3::UnitZ()) * filter.q_body_to_site.toRotationMatrix() / site_.gravity_mps2;
@@ -120,8 +126,17 @@ void StandardTracker::seed(double weight) {
   state_.mixture.order();
   state_.mixture.thin(1e-3);
   while (state_.mixture.size() > keep_max) state_.mixture.drop_lightest();
-  const Component base = waking_component();
-  for (Component& component : state_.mixture) component.weight *= 1.0 - weight;
+  Component base = waking_component();
+  if (located() && state_.airborne) {
+    // What pressure says stays true.
+    base.filter.position_m.z() = lead().position_m.z();
+    base.filter.velocity_mps.z() = lead().velocity_mps.z();
+    base.filter.bias(in::pressure) = lead().bias(in::pressure);
+  }
+  for (Component& component : state_.mixture) {
+    component.weight *= 1.0 - weight;
+    component.filter.set_pivot(pivot_m());
+  }
   if (stands()) {
     seed_standing(base, *range_m, weight);
   } else {

@@ -4,7 +4,7 @@
 // tell and thinned by what follows; mirror images live as long as nothing separates them, and one is put back on
 // long straights, so that no side is ever taken for certain that the ranges have not decided. Ranges enter once,
 // as ranges; a wheeled tag points where it goes; obstruction is one channel for all hypotheses. When the lead no
-// longer explains the ranges, a new ring is put beside it and the evidence decides. MATHEMATICS.md, eq. 47 to 70.
+// longer explains the ranges, a new ring is put beside it and the evidence decides. MATHEMATICS.md, eq. 47 to 66.
 #pragma once
 
 #include <algorithm>
@@ -111,6 +111,8 @@ class StandardTracker final : public MarkedEstimator<StandardState, 12> {
   void wake();
 
   // standard_bank.cpp: where hypotheses come from.
+  /// The anchor that is heard.
+  [[nodiscard]] Vector3 pivot_m() const;
   /// Attitude and biases as they are known before any range; its covariance is plain.
   [[nodiscard]] Component waking_component() const;
   void start_at(const Vector2& antenna_m, double sigma_m);
