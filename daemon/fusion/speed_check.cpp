@@ -41,8 +41,8 @@ void SpeedCheck::add(TimeNs time_ns, const RangeMeasurement& range, double strai
   ring_radius_m_ = before + smooth * (point.range_m - before);
 }
 
-std::optional<SpeedCheck::Speed> SpeedCheck::solved(std::size_t first, bool straight) const {
-  Speed speed;
+std::optional<WindowSpeed> SpeedCheck::solved(std::size_t first, bool straight) const {
+  WindowSpeed speed;
   speed.time_ns = window_.back().time_ns;
   if (straight) {
     const auto fit = least_squares_speed(window_, first);
@@ -66,7 +66,7 @@ void SpeedCheck::solve(TimeNs time_ns, const MotionHistory& motion, double range
   if (first >= window_.size()) return;
   const TimeNs begin_ns = window_[first].time_ns;
   if (window_.back().time_ns - begin_ns < window_short_ns || !motion.steady(begin_ns)) return;
-  std::optional<Speed> speed = solved(first, motion.straight(begin_ns) && course_known);
+  std::optional<WindowSpeed> speed = solved(first, motion.straight(begin_ns) && course_known);
   if (!speed) return;
   // A constant range error left bends the circle: its share of the distance is one of the speed.
   speed->sigma_mps = std::hypot(speed->sigma_mps, speed->speed_mps * range_bias_sigma_m / window_.back().range_m);
@@ -96,7 +96,7 @@ std::optional<double> SpeedCheck::level_range_m(TimeNs time_ns) const {
   return *middle;
 }
 
-std::optional<SpeedCheck::Speed> SpeedCheck::speed(TimeNs time_ns) const {
+std::optional<WindowSpeed> SpeedCheck::speed(TimeNs time_ns) const {
   if (!speed_ || time_ns - speed_->time_ns >= 2 * ns_per_s) return std::nullopt;
   return speed_;
 }

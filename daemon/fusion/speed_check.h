@@ -13,19 +13,20 @@
 
 namespace kedge::fusion {
 
+/// Speed from the ranges of a window alone.
+struct WindowSpeed {
+  TimeNs time_ns = 0;
+  double speed_mps = 0.0;
+  double sigma_mps = 0.0;
+
+  template <class Archive>
+  void fields(Archive& archive) {
+    archive(time_ns, speed_mps, sigma_mps);
+  }
+};
+
 class SpeedCheck {
  public:
-  struct Speed {
-    TimeNs time_ns = 0;
-    double speed_mps = 0.0;
-    double sigma_mps = 0.0;
-
-    template <class Archive>
-    void fields(Archive& archive) {
-      archive(time_ns, speed_mps, sigma_mps);
-    }
-  };
-
   /// The tag has moved for dt_s along this unit vector; not called at rest.
   void extend(const Vector2& direction, double dt_s) { path_s_ += dt_s * direction; }
 
@@ -42,7 +43,7 @@ class SpeedCheck {
   /// Median level range of the last second; none without ranges.
   [[nodiscard]] std::optional<double> level_range_m(TimeNs time_ns) const;
   /// Newest solution not older than 2 s.
-  [[nodiscard]] std::optional<Speed> speed(TimeNs time_ns) const;
+  [[nodiscard]] std::optional<WindowSpeed> speed(TimeNs time_ns) const;
   [[nodiscard]] std::optional<double> ring_radius_m() const { return ring_radius_m_; }
   [[nodiscard]] std::uint32_t anchor() const { return anchor_; }
   void clear() { window_.clear(); }
@@ -53,14 +54,14 @@ class SpeedCheck {
   }
 
  private:
-  [[nodiscard]] std::optional<Speed> solved(std::size_t first, bool straight) const;
+  [[nodiscard]] std::optional<WindowSpeed> solved(std::size_t first, bool straight) const;
 
   Vector2 path_s_ = Vector2::Zero();
   RangeWindow window_;
   std::uint32_t anchor_ = 0;
   std::optional<double> ring_radius_m_;
   TimeNs tried_ns_ = 0;
-  std::optional<Speed> speed_;
+  std::optional<WindowSpeed> speed_;
 };
 
 }  // namespace kedge::fusion

@@ -29,6 +29,8 @@ constexpr int free_bearings = 36;
 constexpr int free_directions = 8;
 constexpr int free_speeds = 3;
 constexpr double free_speed_max_mps = 6.0;
+constexpr double rate_sigma_min_mps = 0.1;
+constexpr double course_sigma_mps = 0.05;
 /// A seed is worth having above this share of the best.
 constexpr double seed_share_min = 1e-3;
 /// Room that the bank leaves for what is there already.
@@ -46,7 +48,76 @@ struct Candidate {
   double weight = 0.0;
 };
 
+using Candidates = std::array<Candidate, static_cast<std::size_t>(free_bearings*(free_directions* free_speeds + 1))>;
+static_assert(std::tuple_size_v<Candidates> >= static_cast<std::size_t>(bank_bearings * bank_speeds));
+
 double square(double value) { return value * value; }
+Vector2 direction(double angle_rad) { return {std::cos(angle_rad), std::sin(angle_rad)}; }
+
+/// Bearings times velocities for a tag that moves already.
+struct MovingBank {
+  std::optional<Vector2> course;  ///< the velocity lies along it
+  int bearings = 0;
+  int velocities = 0;
+  double speed_step_mps = 0.0;
+  double speed_from_mps = 0.0;
+
+  /// Forward, from a little backward on.
+  static MovingBank along(const Vector2& course, double top_mps) {
+    return {course, bank_bearings, bank_speeds, 1.2 * top_mps / (bank_speeds - 1), -0.1 * top_mps};
+  }
+  /// Rings of speed in all directions, and none.
+  static MovingBank free(double top_mps) {
+    return {std::nullopt, free_bearings, free_directions * free_speeds + 1, top_mps / free_speeds, 0.0};
+  }
+  [[nodiscard]] double bearing_sigma_rad() const { return std::numbers::pi / bearings; }
+  [[nodiscard]] double speed_sigma_mps() const { return 0.5 * speed_step_mps; }
+  [[nodiscard]] Vector2 velocity_mps(int index) const {
+    if (course) return (speed_from_mps + index * speed_step_mps) * *course;
+    if (index == 0) return Vector2::Zero();
+    const int ring = (index - 1) / free_directions;
+    const double angle = 2.0 * std::numbers::pi * ((index - 1) % free_directions) / free_directions;
+    return (1 + ring) * speed_step_mps * direction(angle);
+  }
+
+  /// All of them, weighed by the range's rate; how many (eq. 58).
+  std::size_t fill(Candidates& candidates, const RangeRate& rate) const {
+    std::size_t count = 0;
+    for (int b = 0; b < bearings; ++b) {
+      for (int k = 0; k < velocities; ++k) {
+        Candidate& candidate = candidates[count++];
+        candidate.bearing_rad = 2.0 * std::numbers::pi * b / bearings;
+        candidate.velocity_mps = velocity_mps(k);
+        const Vector2 away = direction(candidate.bearing_rad);
+        const double across = candidate.velocity_mps.dot(Vector2(-away.y(), away.x()));
+        const double spread = (course ? course->dot(away) : 1.0) * speed_sigma_mps();
+        const double variance = square(rate.sigma_mps) + square(spread) + square(across * bearing_sigma_rad());
+        const double off = rate.rate_mps - candidate.velocity_mps.dot(away);
+        candidate.weight = std::exp(-0.5 * square(off) / variance) / std::sqrt(variance);
+      }
+    }
+    return count;
+  }
+};
+
+/// Level velocity with the bank's spread, turning with the heading where it follows it. The covariance comes in plain
+/// and leaves in the filter's own coordinates.
+void give_velocity(FullFilter& filter, const Vector2& velocity_mps, const MovingBank& bank) {
+  filter.velocity_mps.head<2>() = velocity_mps;
+  for (Eigen::Index axis = 0; axis < 2; ++axis) forget(filter.P, in::velocity + axis, 0.0);
+  if (bank.course) {
+    filter.velocity_mps.z() = 0.0;
+    filter.P.block<2, 2>(in::velocity, in::velocity) =
+        square(bank.speed_sigma_mps()) * *bank.course * bank.course->transpose() +
+        square(course_sigma_mps) * Matrix2::Identity();
+    FullMatrix turn = FullMatrix::Identity();
+    turn.block<2, 1>(in::velocity, in::heading) = Vector2(-velocity_mps.y(), velocity_mps.x());
+    filter.P = (turn * filter.P * turn.transpose()).eval();
+  } else {
+    filter.P.block<2, 2>(in::velocity, in::velocity) = square(bank.speed_sigma_mps()) * Matrix2::Identity();
+  }
+  filter.set_plain_covariance(filter.P);
+}
 
 }  // namespace
 
@@ -110,7 +181,7 @@ void StandardTracker::start_at(const Vector2& antenna_m, double sigma_m) {
 
 void StandardTracker::place(Component& component, double range_m, double bearing_rad, double across_sigma_m) const {
   FullFilter& filter = component.filter;
-  const Vector2 away(std::cos(bearing_rad), std::sin(bearing_rad));
+  const Vector2 away = direction(bearing_rad);
   const Vector3 lever = filter.q_body_to_site * tag_.antenna_in_body_m;
   const Vector2 anchor = site_.anchors[state_.check.anchor()].position_m.head<2>();
   filter.position_m.head<2>() = anchor + range_m * away - lever.head<2>();
@@ -173,81 +244,37 @@ void StandardTracker::seed_standing(const Component& base, double range_m, doubl
 }
 
 void StandardTracker::seed_moving(const Component& base, double range_m, double weight) {
-  const std::optional<RangeRate> rate = state_.check.rate(state_.time_ns);
-  const double rate_sigma = rate ? std::hypot(rate->sigma_mps, 0.1) : 100.0;
-  const double rate_mps = rate ? rate->rate_mps : 0.0;
-  const bool along_heading = points_where_it_goes();
-  const double top_mps = along_heading ? tag_.speed_max_mps : std::min(tag_.speed_max_mps, free_speed_max_mps);
-  const int bearings = along_heading ? bank_bearings : free_bearings;
-  const int velocities = along_heading ? bank_speeds : free_directions * free_speeds + 1;
-  const double bearing_sigma = std::numbers::pi / bearings;
-  // Forward from a little backward on; free ones in rings of speed.
-  const double speed_step = along_heading ? 1.2 * top_mps / (bank_speeds - 1) : top_mps / free_speeds;
-  const double speed_sigma = 0.5 * speed_step;
-  const Vector3 forward = base.filter.q_body_to_site * Vector3::UnitX();
-  const Vector2 course = forward.head<2>().normalized();
-
-  std::array<Candidate, static_cast<std::size_t>(free_bearings * (free_directions * free_speeds + 1))> candidates;
-  static_assert(candidates.size() >= static_cast<std::size_t>(bank_bearings * bank_speeds));
-  std::size_t count = 0;
-  for (int b = 0; b < bearings; ++b) {
-    for (int k = 0; k < velocities; ++k) {
-      Candidate candidate;
-      candidate.bearing_rad = 2.0 * std::numbers::pi * b / bearings;
-      if (along_heading) {
-        candidate.velocity_mps = (k * speed_step - 0.1 * top_mps) * course;
-      } else if (k > 0) {
-        const double angle = 2.0 * std::numbers::pi * ((k - 1) % free_directions) / free_directions;
-        const double speed = speed_step * (1.0 + (k - 1) / free_directions);  // NOLINT(bugprone-integer-division)
-        candidate.velocity_mps = speed * Vector2(std::cos(angle), std::sin(angle));
-      }
-      const Vector2 away(std::cos(candidate.bearing_rad), std::sin(candidate.bearing_rad));
-      const double along = candidate.velocity_mps.dot(away);
-      const double across = candidate.velocity_mps.dot(Vector2(-away.y(), away.x()));
-      const double spread = along_heading ? course.dot(away) * speed_sigma : speed_sigma;
-      const double variance = square(rate_sigma) + square(spread) + square(across * bearing_sigma);
-      candidate.weight = std::exp(-0.5 * square(rate_mps - along) / variance) / std::sqrt(variance);
-      candidates[count++] = candidate;
-    }
-  }
-  const std::size_t room = Mixture::capacity - state_.mixture.size();
+  const std::optional<RangeRate> known = state_.check.rate(state_.time_ns);
+  const RangeRate rate =
+      known ? RangeRate{known->rate_mps, std::hypot(known->sigma_mps, rate_sigma_min_mps)} : RangeRate{0.0, 100.0};
+  const Vector2 course = (base.filter.q_body_to_site * Vector3::UnitX()).head<2>().normalized();
+  const MovingBank bank = points_where_it_goes() ? MovingBank::along(course, tag_.speed_max_mps)
+                                                 : MovingBank::free(std::min(tag_.speed_max_mps, free_speed_max_mps));
+  Candidates candidates;
+  const std::size_t count = bank.fill(candidates, rate);
   const auto first = candidates.begin();
-  const auto last = first + static_cast<std::ptrdiff_t>(count);
-  std::sort(first, last, [](const Candidate& a, const Candidate& b) {
+  std::sort(first, first + static_cast<std::ptrdiff_t>(count), [](const Candidate& a, const Candidate& b) {
     return a.weight > b.weight || (a.weight == b.weight && a.bearing_rad < b.bearing_rad);
   });
-  std::size_t taken = std::min(room, count);
+  std::size_t taken = std::min(Mixture::capacity - state_.mixture.size(), count);
   while (taken > 1 && candidates[taken - 1].weight < seed_share_min * candidates[0].weight) --taken;
   double total = 0.0;
   for (std::size_t i = 0; i < taken; ++i) total += candidates[i].weight;
   for (std::size_t i = 0; i < taken; ++i) {
+    const Candidate& candidate = candidates[i];
     Component component = base;
-    place(component, range_m, candidates[i].bearing_rad, range_m * bearing_sigma);
-    FullFilter& filter = component.filter;
-    filter.velocity_mps.head<2>() = candidates[i].velocity_mps;
-    filter.velocity_mps.z() = along_heading ? 0.0 : filter.velocity_mps.z();
-    for (Eigen::Index axis = 0; axis < 2; ++axis) forget(filter.P, in::velocity + axis, 0.0);
-    if (along_heading) {
-      filter.P.block<2, 2>(in::velocity, in::velocity) =
-          square(speed_sigma) * course * course.transpose() + 0.0025 * Matrix2::Identity();
-      FullMatrix turn = FullMatrix::Identity();
-      turn.block<2, 1>(in::velocity, in::heading) = Vector2(-filter.velocity_mps.y(), filter.velocity_mps.x());
-      filter.P = (turn * filter.P * turn.transpose()).eval();
-    } else {
-      filter.P.block<2, 2>(in::velocity, in::velocity) = square(speed_sigma) * Matrix2::Identity();
-    }
-    filter.set_plain_covariance(filter.P);
+    place(component, range_m, candidate.bearing_rad, range_m * bank.bearing_sigma_rad());
+    give_velocity(component.filter, candidate.velocity_mps, bank);
     // The range's rate ties bearing and speed together within the seed, too.
-    const Vector2 away(std::cos(candidates[i].bearing_rad), std::sin(candidates[i].bearing_rad));
+    const Vector2 away = direction(candidate.bearing_rad);
     FullLinearised radial;
-    radial.innovation = rate_mps - filter.velocity_mps.head<2>().dot(away);
+    radial.innovation = rate.rate_mps - candidate.velocity_mps.dot(away);
     radial.row.segment<2>(in::velocity) = away;
-    radial.row.segment<2>(in::position) =
-        (filter.velocity_mps.head<2>() - filter.velocity_mps.head<2>().dot(away) * away) / range_m;
-    radial.variance = square(rate_sigma);
-    filter.invariant(radial);
-    filter.update(radial);
-    component.weight = weight * candidates[i].weight / total;
+    radial.row.segment<2>(in::position) = (candidate.velocity_mps - candidate.velocity_mps.dot(away) * away) / range_m;
+    radial.variance = square(rate.sigma_mps);
+    component.filter.invariant(radial);
+    component.filter.update(radial);
+    component.weight = weight * candidate.weight / total;
     state_.mixture.add(component);
   }
 }

@@ -121,7 +121,7 @@ bool StandardTracker::doubtful() const {
   const double speed = lead().velocity_mps.norm();
   const double sigma = std::sqrt(lead().level_covariance().bottomRightCorner<2, 2>().trace());
   if (speed > 1.2 * tag_.speed_max_mps + 2.0 * sigma) return true;
-  const std::optional<SpeedCheck::Speed> check = state_.check.speed(state_.time_ns);
+  const std::optional<WindowSpeed> check = state_.check.speed(state_.time_ns);
   return check && !state_.at_rest &&
          std::abs(check->speed_mps - speed) > doubt_sigmas * std::hypot(check->sigma_mps, sigma, 0.1);
 }

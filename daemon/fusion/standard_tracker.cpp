@@ -380,7 +380,7 @@ Estimate StandardTracker::estimate() const {
     result.heading_rad = state_.attitude.heading_rad();
     result.heading_sigma_rad = tag_.magnetic_heading_sigma_rad;
   }
-  if (const std::optional<SpeedCheck::Speed> speed = state_.check.speed(state_.time_ns)) {
+  if (const std::optional<WindowSpeed> speed = state_.check.speed(state_.time_ns)) {
     result.check_speed_mps = speed->speed_mps;
     result.check_speed_sigma_mps = speed->sigma_mps;
   }
