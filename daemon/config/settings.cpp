@@ -107,11 +107,22 @@ fusion::InertialModel inertial_from(const v1::Inertial& inertial) {
           inertial.accel_full_scale_g() * standard_gravity_mps2};
 }
 
+fusion::Method method_from(v1::Method::Value method) {
+  switch (method) {
+    case v1::Method::speed_aided:
+      return fusion::Method::speed_aided;
+    case v1::Method::plain:
+      return fusion::Method::plain;
+    default:
+      return fusion::Method::mixture;
+  }
+}
+
 pipeline::TagSettings tag_from(const v1::Tag& tag, double site_bearing_rad) {
   pipeline::TagSettings out;
   out.model.name = tag.name();
   out.model.profile = profile_from(tag.profile());
-  out.model.method = tag.method() == v1::Method::plain ? fusion::Method::plain : fusion::Method::speed_aided;
+  out.model.method = method_from(tag.method());
   out.model.antenna_height_m = tag.antenna_height_m();
   out.model.height_sigma_m = tag.height_sigma_m();
   out.model.speed_max_mps = tag.speed_max_mps();
@@ -158,7 +169,7 @@ pipeline::Limits limits_from(const v1::Limits& limits) {
 }  // namespace
 
 v1::Configuration with_defaults(v1::Configuration c) {
-  if (c.method() == v1::Method::standard) c.set_method(v1::Method::speed_aided);
+  if (!c.has_method()) c.set_method(v1::Method::standard);
   fill_numbers(*c.mutable_site());
   for (v1::Anchor& anchor : *c.mutable_anchors()) fill_numbers(anchor);
   for (v1::Tag& tag : *c.mutable_tags()) fill(tag, c.method());

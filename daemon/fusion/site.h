@@ -41,7 +41,7 @@ struct Site {
 };
 
 enum class Profile : std::uint8_t { wheeled, walker, flyer, free };
-enum class Method : std::uint8_t { speed_aided, plain };
+enum class Method : std::uint8_t { mixture, speed_aided, plain };
 
 struct Start {
   Vector2 position_m = Vector2::Zero();
@@ -63,7 +63,7 @@ struct InertialModel {
 struct Tag {
   std::string name;
   Profile profile = Profile::wheeled;
-  Method method = Method::speed_aided;
+  Method method = Method::mixture;
   double antenna_height_m = 0.5;  ///< above the ground
   double height_sigma_m = 0.1;
   double speed_max_mps = 3.0;

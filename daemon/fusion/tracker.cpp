@@ -407,8 +407,4 @@ Estimate Tracker::estimate() const {
   return result;
 }
 
-std::unique_ptr<Estimator> make_estimator(const Site& site, const Tag& tag) {
-  return std::make_unique<Tracker>(site, tag);
-}
-
 }  // namespace kedge::fusion

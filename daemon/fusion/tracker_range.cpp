@@ -3,6 +3,7 @@
 #include <numbers>
 
 #include "core/chi_square.h"
+#include "fusion/obstruction.h"
 #include "fusion/tracker.h"
 
 namespace kedge::fusion {
@@ -18,13 +19,6 @@ constexpr TimeNs window_first_ns = 1'500 * ns_per_ms;
 constexpr double level_range_min_m = 0.5;
 constexpr double smoothing_time_s = 5.0;
 
-// Obstruction as a two-state Markov channel (eq. 39): share of time, mean length, mean excess.
-constexpr double obstructed_share = 0.05;
-constexpr double obstructed_time_s = 0.6;
-constexpr double obstructed_excess_m = 0.7;
-/// Density of a stray range, 1/m: keeps one range from deciding anything alone.
-constexpr double stray_density = 1e-4;
-
 constexpr double mirror_unlikely = 0.01;
 constexpr TimeNs mirror_patience_ns = ns_per_s;
 
@@ -33,17 +27,6 @@ constexpr std::int32_t refused_max = 10;
 constexpr std::int32_t speeds_refused_max = 3;
 
 constexpr double check_chi_square_max = 2.5;
-
-double normal_density(double value, double sigma) {
-  return std::exp(-0.5 * value * value / (sigma * sigma)) / (sigma * std::sqrt(2.0 * std::numbers::pi));
-}
-
-/// Density of an exponential excess plus normal noise.
-double excess_density(double value, double sigma) {
-  const double ratio = sigma / obstructed_excess_m;
-  const double tail = 0.5 * std::erfc((ratio - value / sigma) / std::numbers::sqrt2);
-  return std::exp(std::min(0.5 * ratio * ratio - value / obstructed_excess_m, 50.0)) * tail / obstructed_excess_m;
-}
 
 }  // namespace
 
@@ -94,8 +77,7 @@ void Tracker::remember(const RangeMeasurement& range) {
 
 Outcome Tracker::weigh(const RangeMeasurement& range) {
   const double dt_s = seconds(state_.time_ns - state_.range_ns);
-  const double stay = std::exp(-dt_s / (obstructed_time_s * (1.0 - obstructed_share)));
-  const double obstructed = obstructed_share + stay * (state_.obstructed - obstructed_share);
+  const double obstructed = obstructed_after(state_.obstructed, dt_s);
 
   const Vector3& anchor = site_.anchors[range.anchor].position_m;
   std::array<Linearised, 2> linearised;

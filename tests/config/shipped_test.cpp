@@ -128,7 +128,7 @@ TEST_CASE("the printed configuration spells out defaults, zeros included, and in
   const std::string text = print(loaded("minimal.txtpb"));
   for (const char* line :
        {"  bearing_deg: 0\n", "  tick_hz: 10\n", "    address: \"127.0.0.1\"\n", "    present: true\n",
-        "  allow_remote: false\n", "  range_sigma_m: 0.12\n", "  method: speed_aided\n", "  speed_max_mps: 3\n"}) {
+        "  allow_remote: false\n", "  range_sigma_m: 0.12\n", "  method: standard\n", "  speed_max_mps: 3\n"}) {
     INFO(text);
     CHECK(text.find(line) != std::string::npos);
   }

@@ -30,7 +30,7 @@ TEST_CASE("speed-aided from a known start: error limit and coverage of each scen
   // settled cart may have: all but the last two of 20 are asked for that, give or take what 20 runs can tell.
   for (const Limit limit : {Limit{Scenario::triangle, 1.1, 2.3}, Limit{Scenario::rows, 1.1, 2.3},
                             Limit{Scenario::stop_and_go, 1.0, 2.0}, Limit{Scenario::straight, 1.1, 2.3}}) {
-    const std::vector<Score> scores = run_scenarios(limit.scenario, runs, first_seed, true);
+    const std::vector<Score> scores = run_scenarios(limit.scenario, runs, first_seed, true, Method::speed_aided);
     INFO(simulation::name_of(limit.scenario) << ", seeds from " << first_seed);
     CHECK(median_rms(scores) <= limit.median_m);
     CHECK(scores[runs - 2].rms_m <= limit.worst_but_one_m);
@@ -44,7 +44,7 @@ TEST_CASE("speed-aided from a known start: error limit and coverage of each scen
 }
 
 TEST_CASE("from an unknown start the triangle is found and seldom confidently wrong", "[statistics]") {
-  const std::vector<Score> scores = run_scenarios(Scenario::triangle, runs, first_seed, false);
+  const std::vector<Score> scores = run_scenarios(Scenario::triangle, runs, first_seed, false, Method::speed_aided);
   CHECK(median_rms(scores) <= 1.5);
   CHECK(mean(scores, &Score::located) > 0.95);
   CHECK(mean(scores, &Score::wrong) < 0.10);
@@ -55,7 +55,8 @@ TEST_CASE("on a straight line from an unknown start the tag stays twofold with b
   spec.faults = simulation::Faults::none();
   spec.faults.vibration_mps2 = 0.3;
   spec.faults.range_sigma_m = 0.05;
-  const Tag tag = simulation::tag_of(spec, false);
+  Tag tag = simulation::tag_of(spec, false);
+  tag.method = Method::speed_aided;
   const std::unique_ptr<Estimator> estimator = make_estimator(spec.site, tag);
   const simulation::Vehicle vehicle(spec);
   const double course = vehicle.at(spec.start_ns + 15 * ns_per_s).heading_rad();
@@ -102,7 +103,8 @@ TEST_CASE("without a magnetometer the heading sigma grows and stays honest") {
     spec.magnetometer = false;
     spec.duration_s = 30.0;
     spec.rest_s = 30.0;
-    const Tag tag = simulation::tag_of(spec, true);
+    Tag tag = simulation::tag_of(spec, true);
+    tag.method = Method::speed_aided;
     const std::unique_ptr<Estimator> estimator = make_estimator(spec.site, tag);
     for (const Measurement& measurement : simulation::measurements_of(spec)) estimator->apply(measurement);
     const Estimate estimate = estimator->estimate();

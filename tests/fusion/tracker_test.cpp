@@ -19,6 +19,7 @@ constexpr double not_a_number = std::numeric_limits<double>::quiet_NaN();
 struct Rig {
   explicit Rig(Scenario scenario = Scenario::triangle, std::uint64_t seed = 5, bool known_start = true)
       : spec(simulation::spec_of(scenario, seed)), tag(simulation::tag_of(spec, known_start)) {
+    tag.method = Method::speed_aided;
     measurements = simulation::measurements_of(spec);
   }
   simulation::ScenarioSpec spec;

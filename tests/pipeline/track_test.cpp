@@ -90,7 +90,7 @@ TEST_CASE("a flood between two ticks stays within the bound and loses no verdict
 }
 
 TEST_CASE("from measurement to estimate nothing is allocated once the tag runs") {
-  const auto method = GENERATE(fusion::Method::speed_aided, fusion::Method::plain);
+  const auto method = GENERATE(fusion::Method::mixture, fusion::Method::speed_aided, fusion::Method::plain);
   const auto spec = cart(30.0);
   const auto measurements = simulation::measurements_of(spec);
   fusion::Tag tag = simulation::tag_of(spec, true);

@@ -3,14 +3,11 @@
 // Replaces the program's operator new: to be included by exactly one file of a program.
 #pragma once
 
-#include <atomic>
 #include <cstddef>
 #include <cstdlib>
 #include <new>
 
-namespace kedge::test {
-inline std::atomic<std::size_t> allocations{0};
-}  // namespace kedge::test
+#include "support/allocations.h"
 
 void* operator new(std::size_t size) {
   ++kedge::test::allocations;

@@ -26,7 +26,8 @@ using kedge::simulation::ScenarioSpec;
 
 constexpr int exit_usage = 2;
 
-const std::map<std::string, Method> methods = {{"plain", Method::plain}, {"speed_aided", Method::speed_aided}};
+const std::map<std::string, Method> methods = {
+    {"plain", Method::plain}, {"speed_aided", Method::speed_aided}, {"standard", Method::mixture}};
 
 struct Options {
   std::vector<std::string> scenarios = {"triangle", "rows", "stop-and-go"};
@@ -102,7 +103,7 @@ int run(int argc, char** argv) {
   app.add_option("--scenario", options.scenarios, fmt::format("Of {}; may be repeated", fmt::join(names, ", ")))
       ->check(CLI::IsMember(names))
       ->capture_default_str();
-  app.add_option("--method", options.methods, "plain or speed_aided; may be repeated")
+  app.add_option("--method", options.methods, "plain, speed_aided or standard; may be repeated")
       ->check(CLI::IsMember(methods))
       ->capture_default_str();
   app.add_option("--runs", options.runs, "Runs of each")->check(CLI::Range(1, 100000))->capture_default_str();
