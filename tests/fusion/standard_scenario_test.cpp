@@ -21,7 +21,7 @@ double mean(const std::vector<Score>& scores, double Score::*part) {
 
 }  // namespace
 
-TEST_CASE("standard, every fault on, any start: error limit, coverage, and not confidently wrong") {
+TEST_CASE("standard, every fault on, any start: error limit, coverage, and not confidently wrong", "[statistics]") {
   struct Limit {
     Scenario scenario;
     bool known_start;
@@ -96,7 +96,7 @@ TEST_CASE(
   }
 }
 
-TEST_CASE("standard: heading and position stay honest without a magnetometer") {
+TEST_CASE("standard: heading and position stay honest without a magnetometer", "[statistics]") {
   double square = 0.0;
   double claimed = 0.0;
   constexpr int draws = 20;

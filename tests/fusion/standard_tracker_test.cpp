@@ -87,7 +87,7 @@ TEST_CASE("standard: a checkpoint cut short, or with more components than there 
 TEST_CASE("standard: applying, estimating and keeping allocate nothing, bank and all") {
   const Rig rig(Scenario::triangle, 6, false, 60.0);
   StandardTracker tracker(rig.spec.site, rig.tag);
-  const long before = test::allocations;
+  const std::size_t before = test::allocations;
   for (const Measurement& measurement : rig.measurements) {
     tracker.apply(measurement);
     tracker.keep(1);
