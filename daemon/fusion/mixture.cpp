@@ -92,13 +92,13 @@ void Mixture::drop_lightest() {
   components_.erase(lightest);
 }
 
-void Mixture::reweigh(const LogLikelihoods& log_likelihoods) {
+void Mixture::reweigh(const LogLikelihoods& log_likelihoods, double share) {
   if (components_.size() < 2) return;
   double best = log_likelihoods[0];
   for (std::size_t i = 1; i < components_.size(); ++i) best = std::max(best, log_likelihoods[i]);
   if (!std::isfinite(best)) return;
   for (std::size_t i = 0; i < components_.size(); ++i)
-    components_[i].weight *= std::exp(evidence * (log_likelihoods[i] - best));
+    components_[i].weight *= std::exp(share * evidence * (log_likelihoods[i] - best));
   normalise();
 }
 

@@ -73,8 +73,8 @@ class Mixture {
   [[nodiscard]] Component& lead() { return components_.front(); }
   [[nodiscard]] const Component& lead() const { return components_.front(); }
 
-  /// Multiplies the weights by likelihoods and makes their sum 1 again (eq. 59).
-  void reweigh(const LogLikelihoods& log_likelihoods);
+  /// Multiplies the weights by likelihoods, counted for a share of what they say, and makes their sum 1 again (eq. 59).
+  void reweigh(const LogLikelihoods& log_likelihoods, double share = 1.0);
   void normalise();
   /// The heaviest comes first.
   void order();

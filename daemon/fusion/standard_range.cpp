@@ -17,6 +17,9 @@ constexpr TimeNs double_spacing_ns = 2 * ns_per_s;
 constexpr TimeNs straight_ns = 5 * ns_per_s;
 /// Lost: most ranges of the last seconds unexplained.
 constexpr double doubt_max = 0.8;
+/// How much of its evidence a range loses for each share of unexplained ones in the last seconds, and what is left.
+constexpr double doubt_weight = 5.0;
+constexpr double share_min = 0.1;
 constexpr double doubt_sigmas = 3.5;
 constexpr TimeNs doubt_time_ns = 3 * ns_per_s;
 constexpr TimeNs seed_patience_ns = 15 * ns_per_s;
@@ -86,7 +89,8 @@ Outcome StandardTracker::weigh(const RangeMeasurement& range) {
     if (passes) component.filter.update(linearised, clear_share);
   }
   if (total > 0.0) state_.obstructed = std::clamp(obstructed_total / total, 0.001, 0.999);
-  state_.mixture.reweigh(likelihoods);
+  // What an obstruction has bent takes a while to straighten: until then the hypotheses are not judged by it.
+  state_.mixture.reweigh(likelihoods, std::max(1.0 - doubt_weight * state_.doubt, share_min));
 
   const double smooth = 1.0 - std::exp(-std::max(dt_s, 0.0) / smoothing_time_s);
   state_.range_excess_m += smooth * (std::clamp(outcome.innovation, -10.0, 10.0) - state_.range_excess_m);
