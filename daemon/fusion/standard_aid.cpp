@@ -98,7 +98,10 @@ Outcome StandardTracker::take(const CorrectionMeasurement& measurement) {
                     measurement.heading_sigma_rad > 0.0 && std::isfinite(measurement.position_sigma_m) &&
                     std::isfinite(measurement.heading_sigma_rad);
   if (!sane) return {.code = Outcome::Code::implausible};
-  if (!state_.awake) return {.code = Outcome::Code::noted};
+  if (!state_.awake) {
+    state_.word = measurement;  // holds as the start once the tag has levelled
+    return {.code = Outcome::Code::noted};
+  }
   if (measurement.heading_rad) correct_heading(*measurement.heading_rad, measurement.heading_sigma_rad);
   if (measurement.position_m) correct_position(measurement);
   const bool heading_only = measurement.heading_rad && !measurement.position_m;

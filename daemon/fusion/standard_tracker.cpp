@@ -2,6 +2,7 @@
 
 #include <algorithm>
 #include <cmath>
+#include <utility>
 
 namespace kedge::fusion {
 
@@ -328,19 +329,20 @@ void StandardTracker::take_field(const Vector3& field_ut) {
 void StandardTracker::wake() {
   AttitudeFilter& attitude = state_.attitude;
   if (!attitude.levelled()) return;
-  const Start* start = state_.first && tag_.start ? &*tag_.start : nullptr;
   const bool waits_for_field = tag_.magnetometer && state_.time_ns - state_.begun_ns < field_wait_ns;
   if (!attitude.aligned && waits_for_field) return;
-  if (start != nullptr && start->heading_rad) correct_heading(*start->heading_rad, start->heading_sigma_rad);
+  const Opening opening =
+      opening_of(state_.first ? tag_.start : std::nullopt, std::exchange(state_.word, std::nullopt));
+  if (opening.heading_rad) correct_heading(*opening.heading_rad, opening.heading_sigma_rad);
   state_.awake = true;
-  if (start == nullptr || !(attitude.aligned || state_.told_heading_rad)) return;
+  if (!opening.position_m || !(attitude.aligned || state_.told_heading_rad)) return;
   double nearest_m = 1e9;
   for (const Anchor& anchor : site_.anchors) {
-    nearest_m = std::min(nearest_m, (anchor.position_m.head<2>() - start->position_m).norm());
+    nearest_m = std::min(nearest_m, (anchor.position_m.head<2>() - *opening.position_m).norm());
   }
   // A start that may lie on either side of the anchor is no place to linearise at.
-  if (start->position_sigma_m > 1.0 && start->position_sigma_m > 0.3 * nearest_m) return;
-  start_at(start->position_m, start->position_sigma_m);
+  if (opening.position_sigma_m > 1.0 && opening.position_sigma_m > 0.3 * nearest_m) return;
+  start_at(*opening.position_m, opening.position_sigma_m);
 }
 
 bool StandardTracker::healthy() const {

@@ -16,6 +16,7 @@
 #include "fusion/estimator.h"
 #include "fusion/mixture.h"
 #include "fusion/motion_history.h"
+#include "fusion/opening.h"
 #include "fusion/speed_check.h"
 #include "fusion/stop_detector.h"
 
@@ -71,13 +72,15 @@ struct StandardState {
   TimeNs travel_ns = 0;
   double travel_turned_rad = 0.0;
 
+  std::optional<CorrectionMeasurement> word;  ///< an operator's, said while waking
+
   template <class Archive>
   void fields(Archive& archive) {
     archive(time_ns, begun, first, begun_ns, awake, attitude, told_heading_rad, told_heading_sigma_rad, stops, motion,
             gained_mps, inertial, has_inertial, inertial_ns, at_rest, rest_since_ns, quiet, quiet_since_ns, moved, calm,
             rest_force_mps2, mixture, turned_rad, turned_s, field_ns, constrained_ns, thinned_ns, doubled_ns, height_ns,
             seeded_ns, check, obstructed, doubt, sure_ns, range_ns, range_excess_m, range_gated_share, airborne,
-            pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad);
+            pressure_zero_m, pressure_ns, travel_ns, travel_turned_rad, word);
   }
 };
 

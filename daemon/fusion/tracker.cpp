@@ -316,26 +316,21 @@ void Tracker::constrain_sideways() {
 void Tracker::wake() {
   AttitudeFilter& attitude = state_.attitude;
   if (!attitude.levelled()) return;
-  std::optional<Start> start = state_.first ? tag_.start : std::nullopt;
   const bool waits_for_field = tag_.magnetometer && state_.time_ns - state_.begun_ns < field_wait_ns;
   if (!attitude.aligned && waits_for_field) return;
-  if (const auto word = std::exchange(state_.word, std::nullopt)) {
-    // An operator's word outranks the configuration.
-    if (word->heading_rad) correct_heading(*word->heading_rad, word->heading_sigma_rad);
-    if (word->position_m) start = Start{*word->position_m, word->position_sigma_m, std::nullopt, 0.0};
-    if (start && word->heading_rad) start->heading_rad.reset();
-  }
-  if (start && start->heading_rad) correct_heading(*start->heading_rad, start->heading_sigma_rad);
+  const Opening opening =
+      opening_of(state_.first ? tag_.start : std::nullopt, std::exchange(state_.word, std::nullopt));
+  if (opening.heading_rad) correct_heading(*opening.heading_rad, opening.heading_sigma_rad);
   state_.phase = Phase::ring;
-  if (!start || !attitude.aligned) return;
+  if (!opening.position_m || !attitude.aligned) return;
   double nearest_m = 1e9;
   for (const Anchor& anchor : site_.anchors) {
-    nearest_m = std::min(nearest_m, (anchor.position_m.head<2>() - start->position_m).norm());
+    nearest_m = std::min(nearest_m, (anchor.position_m.head<2>() - *opening.position_m).norm());
   }
   // A start that may lie on either side of the anchor is no place to linearise at.
-  const bool vague = start->position_sigma_m > 1.0 && start->position_sigma_m > 0.3 * nearest_m;
+  const bool vague = opening.position_sigma_m > 1.0 && opening.position_sigma_m > 0.3 * nearest_m;
   if (vague && speed_aided() && points_where_it_goes()) return;
-  start_at(start->position_m, start->position_sigma_m);
+  start_at(*opening.position_m, opening.position_sigma_m);
 }
 
 void Tracker::start_at(const Vector2& antenna_m, double sigma_m) {

@@ -14,6 +14,7 @@
 #include "fusion/attitude_filter.h"
 #include "fusion/estimator.h"
 #include "fusion/motion_history.h"
+#include "fusion/opening.h"
 #include "fusion/position_filter.h"
 #include "fusion/range_speed.h"
 #include "fusion/stop_detector.h"
