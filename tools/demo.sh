@@ -55,7 +55,7 @@ for _ in $(seq 100); do
 done
 
 duration=(${seconds:+--seconds $seconds})
-$bin/tools/kedge-simulate --site config/demo.txtpb --seed 3 --udp 127.0.0.1:47800 --pty $out/serial --serial-tag cart-5 \
+$bin/tools/kedge-simulate --site config/demo.txtpb --seed 22 --udp 127.0.0.1:47800 --pty $out/serial --serial-tag cart-5 \
   --truth $out/truth.csv "${duration[@]}" 2>$out/simulate.log &
 children+=($!)
 
