@@ -49,8 +49,8 @@ TEST_CASE("standard, every fault on, any start: error limit, coverage, and not c
   }
 }
 
-TEST_CASE(
-    "standard: on a straight line from an unknown start both sides are told, in each of many runs; a turn decides") {
+TEST_CASE("standard: on a straight line from an unknown start both sides are told, in many runs; a turn decides",
+          "[statistics]") {
   for (std::uint64_t seed = first_seed; seed < first_seed + 8; ++seed) {
     simulation::ScenarioSpec spec = simulation::spec_of(Scenario::straight, seed);
     spec.placement = simulation::varied_placement(Scenario::straight, seed);
