@@ -48,8 +48,9 @@ struct Candidate {
   double weight = 0.0;
 };
 
-using Candidates = std::array<Candidate, static_cast<std::size_t>(free_bearings*(free_directions* free_speeds + 1))>;
-static_assert(std::tuple_size_v<Candidates> >= static_cast<std::size_t>(bank_bearings * bank_speeds));
+constexpr std::size_t candidates_max = std::size_t{free_bearings} * (std::size_t{free_directions} * free_speeds + 1);
+static_assert(candidates_max >= std::size_t{bank_bearings} * bank_speeds);
+using Candidates = std::array<Candidate, candidates_max>;
 
 double square(double value) { return value * value; }
 Vector2 direction(double angle_rad) { return {std::cos(angle_rad), std::sin(angle_rad)}; }

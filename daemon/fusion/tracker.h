@@ -108,7 +108,7 @@ struct TrackerState {
 };
 
 /// A late measurement costs one copy of this; two dozen are kept for each tag.
-static_assert(sizeof(TrackerState) < 40 * 1024);
+static_assert(sizeof(TrackerState) < std::size_t{40} * 1024);
 
 class Tracker final : public MarkedEstimator<TrackerState, 24> {
  public:
