@@ -8,29 +8,13 @@
 #include "capture/file_sink.h"
 #include "capture/file_source.h"
 #include "capture/sample.h"
+#include "support/temporary_folder.h"
 
 using namespace kedge;
 using namespace kedge::capture;
 using namespace kedge::test;
 
 namespace {
-
-/// A folder of its own, gone at the end.
-class Folder {
- public:
-  Folder() {
-    std::string name = (std::filesystem::temp_directory_path() / "kedge-XXXXXX").string();
-    REQUIRE(::mkdtemp(name.data()) != nullptr);
-    path_ = name;
-  }
-  ~Folder() { std::filesystem::remove_all(path_); }
-  Folder(const Folder&) = delete;
-  Folder& operator=(const Folder&) = delete;
-  [[nodiscard]] std::filesystem::path operator/(const char* name) const { return path_ / name; }
-
- private:
-  std::filesystem::path path_;
-};
 
 /// Files of this process cannot grow beyond: what a full disk looks like to a writer.
 class FileSizeLimit {
@@ -72,7 +56,7 @@ std::vector<Kept> read_file(const std::filesystem::path& path) {
 }  // namespace
 
 TEST_CASE("a capture on disk comes back") {
-  const Folder folder;
+  const TemporaryFolder folder;
   {
     FileSink sink;
     REQUIRE(sink.create(folder / "a.pcapng"));
@@ -87,7 +71,7 @@ TEST_CASE("a capture on disk comes back") {
 }
 
 TEST_CASE("an existing file is never overwritten") {
-  const Folder folder;
+  const TemporaryFolder folder;
   FileSink first;
   REQUIRE(first.create(folder / "a.pcapng"));
   FileSink second;
@@ -98,7 +82,7 @@ TEST_CASE("an existing file is never overwritten") {
 }
 
 TEST_CASE("a capture in a folder that is not there says so") {
-  const Folder folder;
+  const TemporaryFolder folder;
   FileSink sink;
   const Status status = sink.create(folder / "none/a.pcapng");
   REQUIRE_FALSE(status);
@@ -110,7 +94,7 @@ TEST_CASE("a capture in a folder that is not there says so") {
 }
 
 TEST_CASE("a folder is not read as a capture") {
-  const Folder folder;
+  const TemporaryFolder folder;
   FileSource source;
   REQUIRE(source.open(folder / "."));
   const Result<CaptureReader> reader = CaptureReader::open(source);
@@ -119,7 +103,7 @@ TEST_CASE("a folder is not read as a capture") {
 }
 
 TEST_CASE("a disk that is full for a while costs the records refused then, and no other") {
-  const Folder folder;
+  const TemporaryFolder folder;
   FileSink sink;
   REQUIRE(sink.create(folder / "a.pcapng"));
   Result<CaptureWriter> writer = CaptureWriter::begin(sink, sample_head());

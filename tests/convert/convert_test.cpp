@@ -15,6 +15,7 @@
 #include "proto/station.pb.h"
 #include "scoring/csv.h"
 #include "support/program.h"
+#include "support/temporary_folder.h"
 
 using namespace kedge;
 using scoring::CsvTable;
@@ -22,33 +23,15 @@ namespace fs = std::filesystem;
 
 namespace {
 
-/// A folder of its own, gone at the end.
-class Folder {
+class Folder : public kedge::test::TemporaryFolder {
  public:
-  Folder() {
-    std::string name = (fs::temp_directory_path() / "kedge-XXXXXX").string();
-    REQUIRE(::mkdtemp(name.data()) != nullptr);
-    path_ = name;
-  }
-  ~Folder() { fs::remove_all(path_); }
-  Folder(const Folder&) = delete;
-  Folder& operator=(const Folder&) = delete;
-
-  [[nodiscard]] fs::path operator/(const std::string& name) const { return path_ / name; }
-  void file(const std::string& name, const std::string& text) const {
-    fs::create_directories((path_ / name).parent_path());
-    std::ofstream(path_ / name, std::ios::binary) << text;
-  }
   /// Output with this folder's own name taken out.
   [[nodiscard]] std::string without_path(std::string text) const {
-    for (std::size_t at = 0; (at = text.find(path_.string() + "/")) != std::string::npos;) {
-      text.erase(at, path_.string().size() + 1);
+    for (std::size_t at = 0; (at = text.find(path().string() + "/")) != std::string::npos;) {
+      text.erase(at, path().string().size() + 1);
     }
     return text;
   }
-
- private:
-  fs::path path_;
 };
 
 using test::Run;
@@ -114,10 +97,10 @@ CsvTable table_of(const fs::path& path) {
 
 TEST_CASE("logs become a capture and come back") {
   const Folder folder;
-  folder.file("logs/anchors.csv", anchors_csv);
-  folder.file("logs/ranges.csv", ranges_csv);
-  folder.file("logs/inertial.csv", inertial_csv);
-  folder.file("logs/odometry.csv", "t_s,tag,dist_m,dheading_rad\n0.1,1,0.5,0.25\n0.2,1,0.75,-0.5\n");
+  folder.write("logs/anchors.csv", anchors_csv);
+  folder.write("logs/ranges.csv", ranges_csv);
+  folder.write("logs/inertial.csv", inertial_csv);
+  folder.write("logs/odometry.csv", "t_s,tag,dist_m,dheading_rad\n0.1,1,0.5,0.25\n0.2,1,0.75,-0.5\n");
   const std::string capture = (folder / "c.pcapng").string();
   Run run = convert((folder / "logs").string() + " " + capture);
   CHECK(run.output == "9 packets of 2 tags\n");  // 3 ranges, 2 x 2 inertial, 2 travel
@@ -154,8 +137,8 @@ TEST_CASE("logs become a capture and come back") {
 
 TEST_CASE("the capture has a station's own records, in order, and packets at their times") {
   const Folder folder;
-  folder.file("logs/anchors.csv", anchors_csv);
-  folder.file("logs/ranges.csv", "t_s,tag,anchor,range_m\n0.2,1,4,3\n-0.05,1,4,2\n");
+  folder.write("logs/anchors.csv", anchors_csv);
+  folder.write("logs/ranges.csv", "t_s,tag,anchor,range_m\n0.2,1,4,3\n-0.05,1,4,2\n");
   const Run run = convert((folder / "logs").string() + " " + (folder / "c.pcapng").string());
   REQUIRE(run.exit_code == 0);
   // A station refuses what is before its own beginning.
@@ -186,8 +169,8 @@ TEST_CASE("the capture has a station's own records, in order, and packets at the
 
 TEST_CASE("options go into the configuration") {
   const Folder folder;
-  folder.file("logs/anchors.csv", anchors_csv);
-  folder.file("logs/ranges.csv", ranges_csv);
+  folder.write("logs/anchors.csv", anchors_csv);
+  folder.write("logs/ranges.csv", ranges_csv);
   const Run run =
       convert((folder / "logs").string() + " " + (folder / "c.pcapng").string() + " --config-out " +
               (folder / "c.txtpb").string() +
@@ -218,18 +201,18 @@ TEST_CASE("options go into the configuration") {
 
 TEST_CASE("bad logs and command lines are refused with place and remedy") {
   const Folder folder;
-  folder.file("logs/anchors.csv", anchors_csv);
-  folder.file("logs/ranges.csv", ranges_csv);
+  folder.write("logs/anchors.csv", anchors_csv);
+  folder.write("logs/ranges.csv", ranges_csv);
   const auto refusal = [&](const std::string& name, const std::string& text, const std::string& options = "") {
     const std::string before = read_text(folder / ("logs/" + name));
-    folder.file("logs/" + name, text);
+    folder.write("logs/" + name, text);
     const Run run = convert((folder / "logs").string() + " " + (folder / "c.pcapng").string() + " " + options);
     CHECK(run.exit_code == 2);
     CHECK_FALSE(fs::exists(folder / "c.pcapng"));
     if (before.empty()) {
       fs::remove(folder / ("logs/" + name));
     } else {
-      folder.file("logs/" + name, before);
+      folder.write("logs/" + name, before);
     }
     return folder.without_path(run.output);
   };
@@ -284,8 +267,8 @@ TEST_CASE("bad logs and command lines are refused with place and remedy") {
 
 TEST_CASE("rows that a station refuses are converted and told") {
   const Folder folder;
-  folder.file("logs/anchors.csv", anchors_csv);
-  folder.file("logs/ranges.csv", "t_s,tag,anchor,range_m\n0,1,4,2\n0.1,1,4,-9\n0.2,1,4,2\n0.3,1,4,20000\n");
+  folder.write("logs/anchors.csv", anchors_csv);
+  folder.write("logs/ranges.csv", "t_s,tag,anchor,range_m\n0,1,4,2\n0.1,1,4,-9\n0.2,1,4,2\n0.3,1,4,20000\n");
   const Run run = convert((folder / "logs").string() + " " + (folder / "c.pcapng").string());
   CHECK(run.exit_code == 0);
   CHECK(folder.without_path(run.output) ==
@@ -296,9 +279,9 @@ TEST_CASE("rows that a station refuses are converted and told") {
 
 TEST_CASE("nothing is overwritten") {
   const Folder folder;
-  folder.file("logs/anchors.csv", anchors_csv);
-  folder.file("logs/ranges.csv", ranges_csv);
-  folder.file("c.pcapng", "precious");
+  folder.write("logs/anchors.csv", anchors_csv);
+  folder.write("logs/ranges.csv", ranges_csv);
+  folder.write("c.pcapng", "precious");
   Run run = convert((folder / "logs").string() + " " + (folder / "c.pcapng").string());
   CHECK(run.exit_code == 1);
   CHECK(folder.without_path(run.output) ==
@@ -306,7 +289,7 @@ TEST_CASE("nothing is overwritten") {
   CHECK(read_text(folder / "c.pcapng") == "precious");
 
   fs::remove(folder / "c.pcapng");
-  folder.file("c.txtpb", "precious");
+  folder.write("c.txtpb", "precious");
   run = convert((folder / "logs").string() + " " + (folder / "c.pcapng").string() + " --config-out " +
                 (folder / "c.txtpb").string());
   CHECK(run.exit_code == 1);
@@ -324,18 +307,18 @@ TEST_CASE("nothing is overwritten") {
 
 TEST_CASE("a damaged capture gives the tables of what is left, and says what is lost") {
   const Folder folder;
-  folder.file("logs/anchors.csv", anchors_csv);
-  folder.file("logs/ranges.csv", ranges_csv);
+  folder.write("logs/anchors.csv", anchors_csv);
+  folder.write("logs/ranges.csv", ranges_csv);
   REQUIRE(convert((folder / "logs").string() + " " + (folder / "c.pcapng").string()).exit_code == 0);
   std::string bytes = read_text(folder / "c.pcapng");
   bytes.resize(bytes.size() - 5);
-  folder.file("cut.pcapng", bytes);
+  folder.write("cut.pcapng", bytes);
   Run run = convert((folder / "cut.pcapng").string() + " " + (folder / "tables").string());
   CHECK(run.exit_code == 0);
   CHECK(run.output.find("the file ends within a block of") != std::string::npos);
   CHECK(table_of(folder / "tables/ranges.csv").rows() == 3);
 
-  folder.file("text.pcapng", "hello, this is text");
+  folder.write("text.pcapng", "hello, this is text");
   run = convert((folder / "text.pcapng").string() + " " + (folder / "t2").string());
   CHECK(run.exit_code == 2);
   CHECK(folder.without_path(run.output) == "kedge-convert: text.pcapng: a text file, not a pcapng file\n");
@@ -346,7 +329,7 @@ TEST_CASE("a damaged capture gives the tables of what is left, and says what is 
 
 TEST_CASE("a message file becomes tables") {
   const Folder folder;
-  folder.file(
+  folder.write(
       "m.jsonl",
       "{\"sequence\":\"1\",\"position\":{\"tag\":\"cart-1\",\"timeNs\":\"1500000000\",\"standing\":\"settled\","
       "\"eastM\":1.5,"

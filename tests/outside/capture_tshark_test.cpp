@@ -11,6 +11,7 @@
 #include <sstream>
 
 #include "capture/sample.h"
+#include "support/temporary_folder.h"
 
 using namespace kedge;
 using namespace kedge::capture;
@@ -43,20 +44,12 @@ bool have_tshark() {
 /// The bytes as a file, gone at the end.
 class TemporaryFile {
  public:
-  explicit TemporaryFile(std::span<const std::byte> bytes) {
-    std::string name = (std::filesystem::temp_directory_path() / "kedge-XXXXXX").string();
-    const int file = ::mkstemp(name.data());
-    REQUIRE(file >= 0);
-    path_ = name;
-    REQUIRE(::write(file, bytes.data(), bytes.size()) == static_cast<ssize_t>(bytes.size()));
-    ::close(file);
-  }
-  ~TemporaryFile() { std::filesystem::remove(path_); }
-  TemporaryFile(const TemporaryFile&) = delete;
-  TemporaryFile& operator=(const TemporaryFile&) = delete;
+  explicit TemporaryFile(std::span<const std::byte> bytes)
+      : path_(folder_.write("capture.pcapng", {reinterpret_cast<const char*>(bytes.data()), bytes.size()})) {}
   [[nodiscard]] std::string path() const { return path_.string(); }
 
  private:
+  TemporaryFolder folder_;
   std::filesystem::path path_;
 };
 

@@ -25,6 +25,7 @@ class TemporaryFolder {
   }
 
   [[nodiscard]] const std::filesystem::path& path() const { return path_; }
+  [[nodiscard]] std::filesystem::path operator/(const std::filesystem::path& name) const { return path_ / name; }
   [[nodiscard]] std::string file(const char* name) const { return (path_ / name).string(); }
 
   /// Writes a file below the folder, its parents included.
